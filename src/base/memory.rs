@@ -1,0 +1,23 @@
+//! What the system says of this process's memory.
+
+/// Largest resident size this process has reached, in bytes; `None` where the system does not say.
+pub fn peak_bytes() -> Option<u64> {
+    status_line("VmHWM:")
+}
+
+/// Anonymous memory resident now (mapped files not counted), in bytes.
+pub fn anonymous_bytes() -> Option<u64> {
+    status_line("RssAnon:")
+}
+
+/// Resident size now, in bytes.
+pub fn resident_bytes() -> Option<u64> {
+    status_line("VmRSS:")
+}
+
+fn status_line(label: &str) -> Option<u64> {
+    let status = std::fs::read_to_string("/proc/self/status").ok()?;
+    let line = status.lines().find(|line| line.starts_with(label))?;
+    let kibibytes: u64 = line[label.len()..].trim().strip_suffix("kB")?.trim().parse().ok()?;
+    Some(kibibytes * 1024)
+}

@@ -1,0 +1,5 @@
+//! Ellbow
+#![deny(unsafe_code)]
+pub mod base;
+pub mod operator;
+pub mod system;
