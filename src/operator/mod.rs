@@ -1,7 +1,96 @@
 //! Linear operators: what the solvers multiply with.
+//!
+//! An operator works on blocks of lanes: v and s are n×k, u is m×k, row-major with lanes
+//! contiguous. A lane is one least-squares problem on the same matrix.
 
 pub mod rows;
+pub mod stack;
+pub mod weighted;
 pub mod weights;
 
 pub use rows::{Precision, Row, StoredRows};
+pub use stack::Stacked;
+pub use weighted::Weighted;
 pub use weights::RowWeights;
+
+/// In which variables a pass reads v and writes s.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Frame {
+    /// v and s in the operator's own variables y, where x = x₀ + D y.
+    Step,
+    /// v is a model x, s in the operator's own variables: how a process starts.
+    Start,
+    /// v is a model x, u the residual in data units (not weighted), s = AᵀW²u the gradient in x,
+    /// squares of Wu: how a result is certified.
+    Certificate,
+}
+
+/// One pass: u ← Ã v − u·diag(α), s ← Ãᵀ u, squares ← ‖u_l‖² per lane.
+pub struct Pass<'a> {
+    pub frame: Frame,
+    /// Data set of each lane, for weights that differ between sets. Its length is k.
+    pub sets: &'a [usize],
+    /// Strength λ of each lane; read only by operators with penalty rows.
+    pub strengths: &'a [f64],
+    /// n×k.
+    pub v: &'a [f64],
+    /// k.
+    pub alpha: &'a [f64],
+    /// m×k.
+    pub u: &'a mut [f64],
+    /// n×k.
+    pub s: &'a mut [f64],
+    /// k.
+    pub squares: &'a mut [f64],
+    pub scratch: &'a mut Scratch,
+}
+
+/// Memory an operator needs besides the blocks; made once, before the first pass.
+#[derive(Debug, Default)]
+pub struct Scratch {
+    pub(crate) scaled: Vec<f64>,
+    pub(crate) partial: Vec<f64>,
+    pub(crate) partial_squares: Vec<f64>,
+}
+
+pub trait Operator: Sync {
+    /// Rows of u, penalty rows included.
+    fn rows(&self) -> usize;
+
+    fn columns(&self) -> usize;
+
+    /// One traversal of the matrix. Deterministic: the same bits for any number of threads, and
+    /// in each lane whatever the other lanes are.
+    ///
+    /// Panics if a block does not have its documented shape.
+    fn pass(&self, pass: Pass<'_>);
+
+    /// Memory for passes of up to `lanes` lanes: [`Operator::scratch_bytes`].
+    fn scratch(&self, lanes: usize) -> Scratch;
+
+    fn scratch_bytes(&self, lanes: usize) -> u64;
+
+    /// Bytes a pass with `lanes` lanes moves to and from memory, counted from the sizes.
+    fn bytes_per_pass(&self, lanes: usize) -> u64;
+}
+
+impl<T: Operator + ?Sized> Operator for &T {
+    fn rows(&self) -> usize {
+        (**self).rows()
+    }
+    fn columns(&self) -> usize {
+        (**self).columns()
+    }
+    fn pass(&self, pass: Pass<'_>) {
+        (**self).pass(pass);
+    }
+    fn scratch(&self, lanes: usize) -> Scratch {
+        (**self).scratch(lanes)
+    }
+    fn scratch_bytes(&self, lanes: usize) -> u64 {
+        (**self).scratch_bytes(lanes)
+    }
+    fn bytes_per_pass(&self, lanes: usize) -> u64 {
+        (**self).bytes_per_pass(lanes)
+    }
+}

@@ -11,6 +11,8 @@
 
 use sprs::CsMatI;
 
+use crate::kernel::Value;
+
 /// How values are kept when the matrix is not a pattern.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Default)]
 pub enum Precision {
@@ -41,36 +43,6 @@ macro_rules! each_storage {
             $crate::operator::StoredRows::Pattern($matrix) => $body,
         }
     };
-}
-
-/// A stored value as the number it stands for.
-pub trait Value: Copy + Send + Sync {
-    const BYTES: u64;
-    fn number(self) -> f64;
-}
-
-impl Value for f64 {
-    const BYTES: u64 = 8;
-    #[inline(always)]
-    fn number(self) -> f64 {
-        self
-    }
-}
-
-impl Value for f32 {
-    const BYTES: u64 = 4;
-    #[inline(always)]
-    fn number(self) -> f64 {
-        f64::from(self)
-    }
-}
-
-impl Value for () {
-    const BYTES: u64 = 0;
-    #[inline(always)]
-    fn number(self) -> f64 {
-        1.0
-    }
 }
 
 /// One row's entries, columns ascending.

@@ -1,0 +1,71 @@
+//! [W A; λ P] D with P = diag(p): a matrix over penalty rows, the strength λ a property of the lane.
+//!
+//! Used where a start model or a column scaling rules out carrying λ as a shift.
+
+use crate::operator::{Frame, Operator, Pass, Scratch, Weighted};
+
+pub struct Stacked<'a> {
+    top: &'a Weighted<'a>,
+    /// p, one factor per unknown; `None` means 1.
+    penalty: Option<&'a [f64]>,
+}
+
+impl<'a> Stacked<'a> {
+    /// Panics if `penalty` does not hold one value per column.
+    pub fn new(top: &'a Weighted<'a>, penalty: Option<&'a [f64]>) -> Self {
+        assert!(penalty.is_none_or(|p| p.len() == top.columns()), "one factor per column");
+        Self { top, penalty }
+    }
+}
+
+impl Operator for Stacked<'_> {
+    fn rows(&self) -> usize {
+        self.top.rows() + self.top.columns()
+    }
+
+    fn columns(&self) -> usize {
+        self.top.columns()
+    }
+
+    /// Panics on [`Frame::Certificate`]: results are certified on the matrix itself.
+    fn pass(&self, pass: Pass<'_>) {
+        let Pass { frame, sets, strengths, v, alpha, u, s, squares, scratch } = pass;
+        assert!(frame != Frame::Certificate, "certificates are computed without penalty rows");
+        let k = sets.len();
+        let (data_rows, penalty_rows) = u.split_at_mut(self.top.rows() * k);
+        self.top.pass(Pass {
+            frame,
+            sets,
+            strengths,
+            v,
+            alpha,
+            u: data_rows,
+            s: &mut *s,
+            squares: &mut *squares,
+            scratch,
+        });
+        for (j, u) in penalty_rows.chunks_mut(k).enumerate() {
+            let scale = self.top.scale(j);
+            let p = self.penalty.map_or(1.0, |p| p[j]);
+            let forward = if frame == Frame::Step { scale * p } else { p };
+            for l in 0..k {
+                u[l] = strengths[l] * forward * v[j * k + l] - alpha[l] * u[l];
+                s[j * k + l] += strengths[l] * p * scale * u[l];
+                squares[l] += u[l] * u[l];
+            }
+        }
+    }
+
+    fn scratch(&self, lanes: usize) -> Scratch {
+        self.top.scratch(lanes)
+    }
+
+    fn scratch_bytes(&self, lanes: usize) -> u64 {
+        self.top.scratch_bytes(lanes)
+    }
+
+    fn bytes_per_pass(&self, lanes: usize) -> u64 {
+        let penalty_rows = (self.columns() * lanes) as u64;
+        self.top.bytes_per_pass(lanes) + 40 * penalty_rows
+    }
+}

@@ -1,0 +1,150 @@
+//! What the engine is given and what it hands back.
+
+use ndarray::ArrayView2;
+
+use crate::operator::{Operator, RowWeights, Stacked, Weighted};
+use crate::solve::stop::Stop;
+
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Method {
+    Lsqr,
+    Lsmr,
+    Cgls,
+}
+
+impl Method {
+    pub fn word(self) -> &'static str {
+        match self {
+            Self::Lsqr => "lsqr",
+            Self::Lsmr => "lsmr",
+            Self::Cgls => "cgls",
+        }
+    }
+
+    /// Whether one lane of this method carries any number of strengths.
+    pub fn carries_strengths(self) -> bool {
+        !matches!(self, Self::Cgls)
+    }
+}
+
+/// One right-hand side in the blocks.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Lane {
+    /// Column of the data.
+    pub set: usize,
+    /// λ ≥ 0 of each track. Empty only with a scout. One for CGLS and for stacked problems.
+    pub strengths: Vec<f64>,
+}
+
+/// Lanes that share their passes.
+///
+/// The engine works in variables y with x = x₀ + D y, D the operator's column scales and x₀ the
+/// start (the reference unless another is given).
+pub struct Problem<'a> {
+    /// W A D.
+    pub matrix: &'a Weighted<'a>,
+    /// p ≥ 0 of P = diag(p), length n; `None` means 1.
+    pub penalty: Option<&'a [f64]>,
+    /// `false`: λ is a shift on y, which is the penalty only where D = 1/p and x₀ = x_ref.
+    /// `true`: the operator carries penalty rows λP; any D and any x₀.
+    pub stacked: bool,
+    /// b, m×sets, data units, finite.
+    pub data: ArrayView2<'a, f64>,
+    /// x_ref, n×1 or n×sets; `None` means 0.
+    pub reference: Option<ArrayView2<'a, f64>>,
+    /// x₀ if it is not x_ref, n×1 or n×sets.
+    pub start: Option<ArrayView2<'a, f64>>,
+    pub lanes: Vec<Lane>,
+}
+
+impl Problem<'_> {
+    pub fn operator(&self) -> Box<dyn Operator + '_> {
+        if self.stacked {
+            Box::new(Stacked::new(self.matrix, self.penalty))
+        } else {
+            Box::new(self.matrix)
+        }
+    }
+
+    pub fn unknowns(&self) -> usize {
+        self.matrix.columns()
+    }
+
+    pub fn penalty_factor(&self, j: usize) -> f64 {
+        self.penalty.map_or(1.0, |p| p[j])
+    }
+
+    /// x_ref of unknown `j` in a data set.
+    pub fn reference_at(&self, j: usize, set: usize) -> f64 {
+        at(&self.reference, j, set)
+    }
+
+    /// x₀ of unknown `j` in a data set.
+    pub fn origin_at(&self, j: usize, set: usize) -> f64 {
+        if self.start.is_some() { at(&self.start, j, set) } else { self.reference_at(j, set) }
+    }
+
+    /// u before the first pass: W b over λ P x_ref, rows×k.
+    pub fn right_hand_sides(&self) -> Vec<f64> {
+        let (m, n, k) = (self.matrix.rows(), self.unknowns(), self.lanes.len());
+        let penalty_rows = if self.stacked { n } else { 0 };
+        let mut u = vec![0.0; (m + penalty_rows) * k];
+        let weights: &RowWeights = self.matrix.weights();
+        for (i, row) in u.chunks_mut(k.max(1)).enumerate() {
+            for (out, lane) in row.iter_mut().zip(&self.lanes) {
+                *out = if i < m {
+                    weights.at(i, lane.set) * self.data[[i, lane.set]]
+                } else {
+                    let j = i - m;
+                    lane.strengths[0] * self.penalty_factor(j) * self.reference_at(j, lane.set)
+                };
+            }
+        }
+        u
+    }
+
+    /// −x₀ of every lane, n×k: v of the first pass.
+    pub fn negative_origins(&self) -> Vec<f64> {
+        let k = self.lanes.len();
+        let mut v = vec![0.0; self.unknowns() * k];
+        if self.start.is_some() || self.reference.is_some() {
+            for (j, row) in v.chunks_mut(k.max(1)).enumerate() {
+                for (out, lane) in row.iter_mut().zip(&self.lanes) {
+                    *out = -self.origin_at(j, lane.set);
+                }
+            }
+        }
+        v
+    }
+}
+
+fn at(values: &Option<ArrayView2<'_, f64>>, j: usize, set: usize) -> f64 {
+    values.as_ref().map_or(0.0, |v| v[[j, if v.ncols() == 1 { 0 } else { set }]])
+}
+
+/// One finished track; every norm recomputed from its definition.
+#[derive(Debug, Clone)]
+pub struct Solved {
+    pub set: usize,
+    pub strength: f64,
+    /// x, length n.
+    pub model: Vec<f64>,
+    /// b − Ax in data units, length m (also of rows of weight 0).
+    pub residual: Vec<f64>,
+    pub stop: Stop,
+    pub iterations: u64,
+    /// ρ = ‖W(b − Ax)‖.
+    pub residual_norm: f64,
+    /// η = ‖P(x − x_ref)‖.
+    pub penalty_norm: f64,
+    /// ‖x‖.
+    pub model_norm: f64,
+    /// ‖AᵀW²(b − Ax) − λ²P²(x − x_ref)‖ over the unknowns that are free.
+    pub gradient_norm: f64,
+    /// gradient_norm / (‖[WA; λP]‖_F ‖[W(b−Ax); λP(x−x_ref)]‖).
+    pub relative_gradient: f64,
+    /// ‖AᵀW²(b − Ax)‖ over the free unknowns: orthogonality of the residual.
+    pub orthogonality: f64,
+    /// ‖Wb‖.
+    pub data_norm: f64,
+}
