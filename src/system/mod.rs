@@ -4,6 +4,16 @@
 //!
 //! Everything here is in the order of the user's files.
 
+mod assemble;
+mod error;
+mod lengths;
+mod names;
+mod reference;
+mod sigma;
+mod stack;
+
+pub use error::SystemError;
+
 use std::path::PathBuf;
 
 use ndarray::Array2;
@@ -17,11 +27,14 @@ pub struct System {
     /// m×n.
     pub matrix: StoredRows,
     /// m×k, data unit: what the model is fitted to. With a linearisation point this is
-    /// b − g(x_k) + A x_k. 0 where a datum is left out (see `included`).
+    /// b − g(x_k) + A x_k. A datum that is missing (NaN) is 0 here; one whose row is left out by
+    /// the rows table keeps its value, so that its residual can be looked at. Neither counts
+    /// (see [`System::included`]).
     pub data: Array2<f64>,
     /// Added to `data` gives the data as read (g(x_k) − A x_k); `None` without a linearisation point. Length m.
     pub data_shift: Option<Vec<f64>>,
-    /// σ in data units, m×1 or m×k; `None` if the user gave none.
+    /// σ in data units, m×1 or m×k; `None` if the user gave none. Unchecked where a datum does
+    /// not count.
     pub uncertainty: Option<Array2<f64>>,
     /// block weight/σ, and 0 for a datum that is left out.
     pub weights: RowWeights,
