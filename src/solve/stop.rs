@@ -38,6 +38,8 @@ pub enum Stop {
     Stalled,
     IterationLimit,
     Interrupted(Interrupt),
+    /// Not iterated: a dense decomposition.
+    Direct,
     /// A number stopped being finite.
     NotFinite(Fault),
 }
@@ -56,6 +58,7 @@ impl Stop {
             Self::IterationLimit => "iteration-limit",
             Self::Interrupted(Interrupt::TimeLimit) => "time-limit",
             Self::Interrupted(Interrupt::Signal) => "signal",
+            Self::Direct => "direct",
             Self::NotFinite(_) => "not-finite",
         }
     }
@@ -69,6 +72,7 @@ impl Stop {
                 | Self::ZeroData
                 | Self::NoiseLevel
                 | Self::Floor
+                | Self::Direct
         )
     }
 }

@@ -1,0 +1,31 @@
+//! Rules that choose a strength, one file each, and the verdict over them.
+//!
+//! A rule sees records of a sweep, never the matrix. Each gives its own strength, whether it
+//! applies and why not, and whether it sits on an edge of the range.
+
+pub mod corner;
+pub mod corner_pruned;
+pub mod verdict;
+
+pub use verdict::{Choice, Rule, RuleResult, Verdict, choose};
+
+use crate::solve::Process;
+
+/// One point of the trade-off curve.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct Point {
+    pub strength: f64,
+    /// ρ, not squared.
+    pub residual_norm: f64,
+    /// η, not squared.
+    pub penalty_norm: f64,
+    pub converged: bool,
+}
+
+/// What a rule may look at.
+pub struct Curve<'a> {
+    /// Strengths descending, as swept.
+    pub points: &'a [Point],
+    /// Scalars from which ρ, η and dη/dλ follow at any strength; present for a fan.
+    pub process: Option<&'a Process>,
+}

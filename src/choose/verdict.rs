@@ -1,0 +1,189 @@
+//! What the rules say together.
+
+use crate::choose::corner::corner;
+use crate::choose::corner_pruned::corner_pruned;
+use crate::choose::{Curve, Point};
+
+#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum Rule {
+    Corner,
+    CornerPruned,
+}
+
+impl Rule {
+    pub const ALL: [Self; 2] = [Self::Corner, Self::CornerPruned];
+
+    pub fn word(self) -> &'static str {
+        match self {
+            Self::Corner => "corner",
+            Self::CornerPruned => "corner-pruned",
+        }
+    }
+}
+
+/// One rule's view.
+#[derive(Debug, Clone, PartialEq, serde::Serialize)]
+pub struct RuleResult {
+    pub rule: Rule,
+    /// The rule's own strength, not rounded to the sweep's; `None` where it does not apply.
+    pub strength: Option<f64>,
+    pub applicable: bool,
+    pub at_edge: bool,
+    /// Why it does not apply, or what to mind.
+    pub note: String,
+    /// Curvature at the strength, for rules that have one.
+    #[serde(skip)]
+    pub bend: Option<f64>,
+}
+
+impl RuleResult {
+    pub fn at(rule: Rule, strength: f64) -> Self {
+        Self {
+            rule,
+            strength: Some(strength),
+            applicable: true,
+            at_edge: false,
+            note: String::new(),
+            bend: None,
+        }
+    }
+
+    pub fn not_applicable(rule: Rule, note: &str) -> Self {
+        Self {
+            rule,
+            strength: None,
+            applicable: false,
+            at_edge: false,
+            note: note.into(),
+            bend: None,
+        }
+    }
+}
+
+#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum Verdict {
+    /// The rules that apply lie within a factor of [`AGREED_FACTOR`].
+    Agreed,
+    /// They do not.
+    Divided,
+    /// They lie more than a factor of [`UNDETERMINED_FACTOR`] apart, sit on an edge, or none applies.
+    Undetermined,
+}
+
+/// Rules within this factor of each other agree: the error of a reconstruction near its best
+/// strength is flat over about that much.
+pub const AGREED_FACTOR: f64 = 2.0;
+
+/// Rules further apart than this: the data do not determine the strength.
+pub const UNDETERMINED_FACTOR: f64 = 10.0;
+
+/// The choice over a sweep.
+#[derive(Debug, Clone, PartialEq, serde::Serialize)]
+pub struct Choice {
+    /// The swept strength nearest to the decisive rule's, whose model is handed over.
+    pub strength: f64,
+    /// Its place in the sweep.
+    #[serde(skip)]
+    pub place: usize,
+    pub rule: Option<Rule>,
+    pub rules: Vec<RuleResult>,
+    /// log₁₀ of the largest over the smallest strength of the rules that apply.
+    pub spread_decades: f64,
+    pub verdict: Verdict,
+    pub reasons: Vec<String>,
+}
+
+/// Applies every rule; `wanted` makes one decisive, else the curvature corner is, else the pruned one.
+///
+/// Panics on a sweep without points.
+pub fn choose(curve: &Curve<'_>, wanted: Option<Rule>) -> Choice {
+    let rules = vec![corner(curve), corner_pruned(curve)];
+    let applicable: Vec<&RuleResult> = rules.iter().filter(|r| r.applicable).collect();
+    let inner = |r: &&&RuleResult| !r.at_edge;
+    let decisive = match wanted {
+        Some(rule) => applicable.iter().find(|r| r.rule == rule),
+        None => applicable.iter().find(inner).or_else(|| applicable.first()),
+    };
+    let spread_decades = spread(&applicable);
+    let mut reasons = Vec::new();
+    let verdict = judge(&applicable, spread_decades, decisive.copied(), &mut reasons);
+    let (place, rule) = match decisive {
+        Some(result) => {
+            let strength = result.strength.expect("an applicable rule has a strength");
+            (nearest(curve.points, strength), Some(result.rule))
+        }
+        None => {
+            reasons.push(
+                "No rule applies, so the middle of the range is handed over: choose with --strength in `ellbow solve`.".into(),
+            );
+            (curve.points.len() / 2, None)
+        }
+    };
+    if let Some(rule) = wanted.filter(|rule| decisive.is_none_or(|d| d.rule != *rule)) {
+        let note = rules.iter().find(|r| r.rule == rule).map_or("", |r| r.note.as_str());
+        reasons.push(format!("Rule {} does not apply: {note}.", rule.word()));
+    }
+    if !curve.points[place].converged {
+        reasons.push(
+            "The model at the chosen strength has not converged: raise --max-iterations.".into(),
+        );
+    }
+    reasons.push(
+        "A corner tends to under-smooth: expect more detail and more noise than the data support."
+            .into(),
+    );
+    let strength = curve.points[place].strength;
+    Choice { strength, place, rule, rules, spread_decades, verdict, reasons }
+}
+
+fn spread(applicable: &[&RuleResult]) -> f64 {
+    let strengths = applicable.iter().filter_map(|r| r.strength);
+    let (low, high) =
+        strengths.fold((f64::INFINITY, 0.0f64), |(low, high), s| (low.min(s), high.max(s)));
+    if high > 0.0 { (high / low).log10() } else { 0.0 }
+}
+
+fn judge(
+    applicable: &[&RuleResult],
+    spread_decades: f64,
+    decisive: Option<&RuleResult>,
+    reasons: &mut Vec<String>,
+) -> Verdict {
+    for result in applicable.iter().filter(|r| r.at_edge) {
+        reasons.push(format!(
+            "{} lies on the edge of the range, at {:.3e}: extend it with --strengths.",
+            result.rule.word(),
+            result.strength.unwrap_or(f64::NAN)
+        ));
+    }
+    if decisive.is_none_or(|r| r.at_edge) {
+        return Verdict::Undetermined;
+    }
+    if applicable.len() < 2 {
+        reasons.push("Only one rule applies: there is no second opinion.".into());
+        return Verdict::Undetermined;
+    }
+    let factor = 10f64.powf(spread_decades);
+    if factor > UNDETERMINED_FACTOR {
+        reasons.push(format!("The rules lie a factor {factor:.1} apart: the strength is not determined by these data."));
+        Verdict::Undetermined
+    } else if factor > AGREED_FACTOR {
+        reasons.push(format!(
+            "The rules lie a factor {factor:.1} apart: look at both models before you act."
+        ));
+        Verdict::Divided
+    } else {
+        reasons.push(format!("The rules lie within a factor {factor:.1} of each other."));
+        Verdict::Agreed
+    }
+}
+
+/// Place of the swept strength nearest in log λ.
+fn nearest(points: &[Point], strength: f64) -> usize {
+    let distance = |p: &Point| (p.strength / strength).ln().abs();
+    (0..points.len())
+        .min_by(|&a, &b| distance(&points[a]).total_cmp(&distance(&points[b])))
+        .expect("a sweep with points")
+}

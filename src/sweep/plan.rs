@@ -1,0 +1,181 @@
+//! How a set of strengths is solved: variables, scaling, fan or stacked lanes.
+
+use crate::operator::{StoredRows, Weighted};
+use crate::solve::Method;
+
+/// Column norms that span more than this factor are evened out by scaling.
+pub const SPAN_MAX: f64 = 100.0;
+
+/// Column scaling as a preconditioner: the same solution, fewer passes.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default)]
+pub enum Scaling {
+    /// Where the column norms of [WA; λP] span more than [`SPAN_MAX`], and it does not cost a
+    /// sweep its fan.
+    #[default]
+    Auto,
+    On,
+    Off,
+}
+
+/// What the plan is made from.
+pub struct Facts<'a> {
+    pub matrix: &'a StoredRows,
+    /// Σᵢ(wᵢaᵢⱼ)² of every column, of the first data set.
+    pub column_squares: &'a [f64],
+    /// p, or `None` for 1.
+    pub penalty: Option<&'a [f64]>,
+    /// Unknowns held at the reference.
+    pub held: Option<&'a [bool]>,
+    pub starts_elsewhere: bool,
+    pub method: Method,
+    pub scaling: Scaling,
+}
+
+/// The variables y of x = x₀ + D y, and who carries λ.
+#[derive(Debug, Clone, PartialEq)]
+pub struct Plan {
+    /// D; `None` means 1.
+    pub scales: Option<Vec<f64>>,
+    /// Penalty rows in the operator instead of λ as a shift.
+    pub stacked: bool,
+    /// One lane carries all strengths.
+    pub fan: bool,
+    /// D evens out the columns.
+    pub scaled: bool,
+}
+
+impl Plan {
+    /// For strengths of which `smallest` is the least; `many` if a fan would carry more than one.
+    pub fn new(facts: &Facts<'_>, smallest: f64, many: bool) -> Self {
+        let norms = facts.norms(smallest);
+        let shifts = facts.can_shift(smallest);
+        let carries = facts.method.carries_strengths();
+        let keeps_fan = many && shifts && carries;
+        let scaled = match facts.scaling {
+            Scaling::On => true,
+            Scaling::Off => false,
+            Scaling::Auto => span(&norms) > SPAN_MAX && !keeps_fan,
+        };
+        if scaled {
+            let scales = (0..norms.len()).map(|j| facts.scale(j, || 1.0 / norms[j], norms[j]));
+            let stacked = smallest > 0.0;
+            return Self {
+                scales: Some(scales.collect()),
+                stacked,
+                scaled,
+                fan: carries && !stacked,
+            };
+        }
+        let stacked = !shifts;
+        let made_identity = facts.penalty.filter(|_| !stacked && smallest > 0.0);
+        let scales = match (made_identity, facts.held) {
+            (None, None) => None,
+            (penalty, _) => Some(
+                (0..norms.len())
+                    .map(|j| facts.scale(j, || penalty.map_or(1.0, |p| 1.0 / p[j]), 1.0))
+                    .collect(),
+            ),
+        };
+        Self { scales, stacked, scaled, fan: carries && !stacked }
+    }
+}
+
+impl Facts<'_> {
+    /// Whether L is I in some variables, so that λ is a shift.
+    fn can_shift(&self, smallest: f64) -> bool {
+        let invertible = self.penalty.is_none_or(|p| {
+            p.iter().enumerate().all(|(j, p)| *p > 0.0 || self.held.is_some_and(|h| h[j]))
+        });
+        smallest == 0.0 || (invertible && !self.starts_elsewhere)
+    }
+
+    /// Norms of the columns of [WA; λP]; 0 for a held unknown.
+    fn norms(&self, strength: f64) -> Vec<f64> {
+        let norm = |j: usize| {
+            let p = strength * self.penalty.map_or(1.0, |p| p[j]);
+            let held = self.held.is_some_and(|h| h[j]);
+            if held { 0.0 } else { (self.column_squares[j] + p * p).sqrt() }
+        };
+        (0..self.column_squares.len()).map(norm).collect()
+    }
+
+    fn scale(&self, j: usize, scale: impl Fn() -> f64, norm: f64) -> f64 {
+        if self.held.is_some_and(|h| h[j]) {
+            0.0
+        } else if norm == 0.0 {
+            // Neither data nor penalty touch it: it stays where it starts.
+            1.0
+        } else {
+            scale()
+        }
+    }
+}
+
+/// Largest over smallest positive norm; 1 if there is none.
+pub fn span(norms: &[f64]) -> f64 {
+    let positive = norms.iter().copied().filter(|norm| *norm > 0.0);
+    let (low, high) =
+        positive.fold((f64::INFINITY, 0.0f64), |(low, high), x| (low.min(x), high.max(x)));
+    if high > 0.0 { high / low } else { 1.0 }
+}
+
+/// A borrowed operator for a plan.
+pub fn weighted<'a>(
+    plan: &'a Plan,
+    matrix: &'a StoredRows,
+    weights: &'a crate::operator::RowWeights,
+) -> Weighted<'a> {
+    Weighted::new(matrix, weights, plan.scales.as_deref())
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    fn facts<'a>(matrix: &'a StoredRows, squares: &'a [f64]) -> Facts<'a> {
+        Facts {
+            matrix,
+            column_squares: squares,
+            penalty: None,
+            held: None,
+            starts_elsewhere: false,
+            method: Method::Lsqr,
+            scaling: Scaling::Auto,
+        }
+    }
+
+    #[test]
+    fn scaling_comes_on_beyond_a_factor_of_a_hundred_but_never_costs_a_sweep_its_fan() {
+        let matrix = StoredRows::from_dense(1, 2, &[1.0, 1.0]);
+        let near = [1.0, 9_900.0];
+        let far = [1.0, 10_100.0];
+        assert!(!Plan::new(&facts(&matrix, &near), 0.0, false).scaled);
+        let plan = Plan::new(&facts(&matrix, &far), 0.0, false);
+        assert!(plan.scaled && !plan.stacked);
+        assert_eq!(plan.scales.unwrap()[0], 1.0);
+        // With λ = 10 the columns of [WA; λI] span about 10 only.
+        assert!(!Plan::new(&facts(&matrix, &far), 10.0, false).scaled);
+        let plan = Plan::new(&facts(&matrix, &far), 0.1, false);
+        assert!(plan.scaled && plan.stacked);
+        let plan = Plan::new(&facts(&matrix, &far), 0.1, true);
+        assert!(plan.fan && !plan.scaled && plan.scales.is_none());
+    }
+
+    #[test]
+    fn what_rules_out_the_fan_stacks() {
+        let matrix = StoredRows::from_dense(1, 2, &[1.0, 1.0]);
+        let squares = [1.0, 1.0];
+        let zero = [0.0, 2.0];
+        let plain = facts(&matrix, &squares);
+        assert!(Plan::new(&Facts { starts_elsewhere: true, ..plain }, 1.0, false).stacked);
+        let plain = facts(&matrix, &squares);
+        assert!(Plan::new(&Facts { penalty: Some(&zero), ..plain }, 1.0, true).stacked);
+        let plain = facts(&matrix, &squares);
+        let held = Facts { penalty: Some(&zero), held: Some(&[true, false]), ..plain };
+        let plan = Plan::new(&held, 1.0, true);
+        assert_eq!((plan.stacked, plan.scales.unwrap()), (false, vec![0.0, 0.5]));
+        let cgls = Facts { method: Method::Cgls, ..facts(&matrix, &squares) };
+        let plan = Plan::new(&cgls, 1.0, true);
+        assert!(!plan.stacked && !plan.fan);
+    }
+}
