@@ -4,6 +4,8 @@
 //!
 //! Everything here is in the order of the user's files.
 
+pub mod rays;
+
 use std::path::PathBuf;
 
 use ndarray::Array2;
