@@ -225,7 +225,7 @@ fn every_ray_crosses_the_whole_section() {
             rays_of_cell[j] += 1;
         }
     }
-    // The corners of the section above the shallowest and below the deepest points see no ray.
+    // Strips above the shallowest and below the deepest points see no ray.
     assert_eq!(demo.rays.matrix.entries(), 21_138);
     assert_eq!(rays_of_cell.iter().filter(|&&rays| rays == 0).count(), 156);
 }
