@@ -4,6 +4,7 @@ use ellbow::base::random::Stream;
 use ellbow::base::{Complaint, Grid};
 use ellbow::system::rays::{RayFlaw, Segment, matrix, trace};
 use proptest::prelude::*;
+use proptest::test_runner::RngSeed;
 
 #[path = "support/grids.rs"]
 mod grids;
@@ -58,6 +59,12 @@ fn corners_stay_corners_where_spacings_are_not_exact_numbers() {
         assert_eq!(found.len(), cells, "{cells} cells from {origin}");
         let other = traced(&grid, &[far[0], origin, origin], &[origin, far[1], far[2]]);
         assert_eq!(other.len(), cells);
+        // From and to where no plane is, so that each axis rounds its crossings differently.
+        for (before, beyond) in [(0.37, 0.41), (1.0 / 3.0, 1.7), (2.9, 0.1)] {
+            let near = [0.1, 0.3, 0.7].map(|spacing| origin - before * spacing);
+            let far = [0.1, 0.3, 0.7].map(|spacing| origin + spacing * (cells as f64 + beyond));
+            assert_eq!(traced(&grid, &near, &far).len(), cells);
+        }
     }
 }
 
@@ -214,14 +221,19 @@ fn cases() -> impl Strategy<Value = (Grid, Segment)> {
 }
 
 proptest! {
-    #![proptest_config(ProptestConfig { cases: 4000, failure_persistence: None, ..Default::default() })]
+    #![proptest_config(ProptestConfig { cases: 4000, failure_persistence: None, rng_seed: RngSeed::Fixed(1), ..Default::default() })]
 
-    /// Coordinates are below 64 and lengths below 150: where a ray runs shallow its crossings
-    /// 64·8ε/min(run) in α; 1e-9 of a cell is the most that may be moved between neighbours.
+    /// Where a ray crosses the planes of an axis at a shallow angle, rounding of the coordinates
+    /// moves the crossings along the ray; up to 1e-9 of a cell (3 wide) the tracer may then join
+    /// two of them, which moves that length to a neighbour. Random ends make steeper angles than
+    /// those at which the reference itself is worse than 1e-9.
     #[test]
     fn lengths_agree_with_the_box_by_box_reference((grid, segment) in cases()) {
-        prop_assume!(segment.from != segment.to);
         let mut out = Vec::new();
+        if segment.from == segment.to {
+            prop_assert_eq!(trace(&grid, &segment, &mut out), Err(RayFlaw::ZeroLength));
+            return Ok(());
+        }
         let chord = trace(&grid, &segment, &mut out).unwrap();
         let sum: f64 = out.iter().map(|e| e.1).sum();
         prop_assert!((sum - chord).abs() <= 1e-12 * chord.max(1e-3));
@@ -242,11 +254,10 @@ proptest! {
 
     #[test]
     fn a_reversed_ray_has_the_same_bits_in_reverse((grid, segment) in cases()) {
-        prop_assume!(segment.from != segment.to);
         let (mut there, mut back) = (Vec::new(), Vec::new());
-        let chord = trace(&grid, &segment, &mut there).unwrap();
+        let chord = trace(&grid, &segment, &mut there);
         let reverse = Segment { from: segment.to, to: segment.from };
-        prop_assert_eq!(chord, trace(&grid, &reverse, &mut back).unwrap());
+        prop_assert_eq!(chord, trace(&grid, &reverse, &mut back));
         back.reverse();
         prop_assert_eq!(there, back);
     }
