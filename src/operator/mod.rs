@@ -1,7 +1,10 @@
 //! Linear operators: what the solvers multiply with.
 
+pub mod build;
 pub mod rows;
+pub mod settle;
 pub mod weights;
 
 pub use rows::{Precision, Row, StoredRows};
+pub use settle::Duplicates;
 pub use weights::RowWeights;
