@@ -9,6 +9,7 @@
 //!
 //! Peak memory: the final arrays (12, 8 or 4 bytes an entry and 8 a row) and one batch.
 
+use std::sync::Arc;
 use std::sync::atomic::{AtomicUsize, Ordering};
 
 use rayon::prelude::*;
@@ -88,8 +89,7 @@ impl RowCounts {
 
     /// Turns the counts into the place of each row's first entry: row i's at i + 1, and the total.
     fn into_starts(self) -> (Vec<usize>, usize) {
-        let mut starts: Vec<usize> =
-            self.counts.into_iter().map(AtomicUsize::into_inner).collect();
+        let mut starts: Vec<usize> = self.counts.into_iter().map(AtomicUsize::into_inner).collect();
         let mut total = 0;
         for start in &mut starts[1..] {
             total += std::mem::replace(start, total);
@@ -154,7 +154,7 @@ pub struct Scatter<V> {
 /// One piece of a batch, sorted by range of rows.
 pub struct Buckets<V> {
     /// First row of each range, and one past the last.
-    first_rows: Vec<usize>,
+    first_rows: Arc<[usize]>,
     /// Range of the entry before: entries near each other are mostly in one.
     range: usize,
     ranges: Vec<Bucket<V>>,
@@ -167,6 +167,17 @@ struct Bucket<V> {
 }
 
 impl<V: Keep> Buckets<V> {
+    /// Empty buckets for the ranges of [`Scatter::first_rows`].
+    pub fn new(first_rows: &Arc<[usize]>) -> Self {
+        Self {
+            first_rows: Arc::clone(first_rows),
+            range: 0,
+            ranges: (1..first_rows.len())
+                .map(|_| Bucket { places: Vec::new(), values: Vec::new() })
+                .collect(),
+        }
+    }
+
     /// Adds an entry. Panics if the row is out of range or beyond u32.
     #[inline]
     pub fn push(&mut self, row: usize, column: u32, value: f64) {
@@ -195,15 +206,9 @@ impl<V: Keep> Scatter<V> {
         }
     }
 
-    /// Empty buckets for one piece of a batch.
-    pub fn buckets(&self) -> Buckets<V> {
-        Buckets {
-            first_rows: self.cuts.iter().map(|cut| cut.0).collect(),
-            range: 0,
-            ranges: (1..self.cuts.len())
-                .map(|_| Bucket { places: Vec::new(), values: Vec::new() })
-                .collect(),
-        }
+    /// First row of each range that is filled on its own, and one past the last row.
+    pub fn first_rows(&self) -> Arc<[usize]> {
+        self.cuts.iter().map(|cut| cut.0).collect()
     }
 
     /// Puts a batch in place; pieces are taken in order.
@@ -266,6 +271,51 @@ impl<V: Keep> Scatter<V> {
     }
 }
 
+/// Entries handed to the ranges at once by a [`Feeder`].
+const FEED: usize = 1 << 18;
+
+/// Fills a [`Scatter`] with entries that come one after another.
+pub struct Feeder<V> {
+    scatter: Scatter<V>,
+    first_rows: Arc<[usize]>,
+    held: Buckets<V>,
+    count: usize,
+}
+
+impl<V: Keep> Feeder<V> {
+    pub fn new(counts: RowCounts, columns: usize) -> Self {
+        let scatter = Scatter::new(counts, columns);
+        let first_rows = scatter.first_rows();
+        let held = Buckets::new(&first_rows);
+        Self { scatter, first_rows, held, count: 0 }
+    }
+
+    /// Adds an entry; as [`Buckets::push`].
+    ///
+    /// # Errors
+    /// As [`Scatter::put`].
+    pub fn push(&mut self, row: usize, column: u32, value: f64) -> Result<(), Changed> {
+        self.held.push(row, column, value);
+        self.count += 1;
+        if self.count == FEED { self.flush() } else { Ok(()) }
+    }
+
+    fn flush(&mut self) -> Result<(), Changed> {
+        self.count = 0;
+        let full = std::mem::replace(&mut self.held, Buckets::new(&self.first_rows));
+        self.scatter.put(&[full])
+    }
+
+    /// As [`Scatter::finish`].
+    ///
+    /// # Errors
+    /// As [`Scatter::put`] and [`Scatter::finish`].
+    pub fn finish(mut self) -> Result<Unsettled<V>, Changed> {
+        self.flush()?;
+        self.scatter.finish()
+    }
+}
+
 /// Cuts the rows into ranges of about as many entries each; `starts` as in [`Scatter`].
 fn cut_rows(starts: &[usize], total: usize) -> Vec<(usize, usize)> {
     let rows = starts.len() - 1;
@@ -313,11 +363,12 @@ mod tests {
             list.iter().for_each(|entry| counter.add(entry.0));
         }
         let mut scatter = Scatter::<f64>::new(counts, 40);
+        let first_rows = scatter.first_rows();
         for batch in list.chunks(97) {
             let pieces: Vec<_> = batch
                 .chunks(13)
                 .map(|piece| {
-                    let mut buckets = scatter.buckets();
+                    let mut buckets = Buckets::new(&first_rows);
                     piece.iter().for_each(|&(row, column, value)| buckets.push(row, column, value));
                     buckets
                 })
@@ -347,7 +398,7 @@ mod tests {
         let counts = RowCounts::new(2);
         counts.add(0, 1);
         let mut scatter = Scatter::<()>::new(counts, 2);
-        let mut buckets = scatter.buckets();
+        let mut buckets = Buckets::new(&scatter.first_rows());
         buckets.push(0, 0, 1.0);
         buckets.push(0, 1, 1.0);
         assert_eq!(scatter.put(&[buckets]), Err(Changed));

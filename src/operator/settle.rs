@@ -51,9 +51,34 @@ pub struct Settled {
 /// Why rows could not be settled; rows and columns from 0.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 pub enum Refused {
-    Repeated { row: usize, column: usize },
-    SumOverflows { row: usize, column: usize },
-    SumVanishes { row: usize, column: usize },
+    Repeated {
+        row: usize,
+        column: usize,
+    },
+    SumOverflows {
+        row: usize,
+        column: usize,
+    },
+    SumVanishes {
+        row: usize,
+        column: usize,
+    },
+    /// More than 2³² − 1 entries in one row.
+    RowTooLong {
+        row: usize,
+    },
+}
+
+impl Refused {
+    /// Row and column, where it is one entry that is refused.
+    pub fn entry(self) -> Option<(usize, usize)> {
+        match self {
+            Self::Repeated { row, column }
+            | Self::SumOverflows { row, column }
+            | Self::SumVanishes { row, column } => Some((row, column)),
+            Self::RowTooLong { .. } => None,
+        }
+    }
 }
 
 impl<V: Keep> Unsettled<V> {
@@ -64,6 +89,10 @@ impl<V: Keep> Unsettled<V> {
     /// # Errors
     /// See [`Refused`]; the first in order of rows, then columns.
     pub fn settle(mut self, rules: &Rules) -> Result<Settled, Refused> {
+        let too_long = |pair: &[usize]| pair[1] - pair[0] > u32::MAX as usize;
+        if let Some(row) = self.pointers.windows(2).position(too_long) {
+            return Err(Refused::RowTooLong { row });
+        }
         let found = self.sort_rows(rules);
         if let Some(refused) = found.refused {
             return Err(refused);
@@ -164,7 +193,6 @@ fn value_of_run<V: Keep>(values: &[V], duplicates: Duplicates) -> f64 {
 /// Keys of column and place are sorted, then the values follow the cycles of the permutation:
 /// 8 bytes an entry instead of a second copy of columns and values.
 fn sort_row<V: Keep>(columns: &mut [u32], values: &mut [V], keys: &mut Vec<u64>) {
-    assert!(u32::try_from(columns.len()).is_ok(), "a row holds fewer than 2³² entries");
     keys.clear();
     keys.extend(columns.iter().zip(0u64..).map(|(&column, place)| u64::from(column) << 32 | place));
     keys.sort_unstable();
