@@ -6,13 +6,18 @@
 
 mod assemble;
 mod error;
+pub mod facts;
 mod lengths;
 mod names;
 mod reference;
 mod sigma;
+mod spread;
 mod stack;
+mod twins;
+mod visit;
 
 pub use error::SystemError;
+pub use facts::Facts;
 
 use std::path::PathBuf;
 
