@@ -7,6 +7,7 @@
 mod assemble;
 mod error;
 pub mod facts;
+pub mod findings;
 mod lengths;
 mod names;
 mod reference;
@@ -18,6 +19,7 @@ mod visit;
 
 pub use error::SystemError;
 pub use facts::Facts;
+pub use findings::{Finding, QuickFit, findings};
 
 use std::path::PathBuf;
 
