@@ -2,8 +2,9 @@
 //! thread may draw any of them in any order and all runs agree bit for bit.
 
 /// Finaliser of the 64-bit mix of Steele, Lea & Flood, "Fast splittable pseudorandom number
-/// generators", OOPSLA 2014 (constants of Stafford's variant 13).
-fn mix(mut z: u64) -> u64 {
+/// generators", OOPSLA 2014 (constants of Stafford's variant 13). A bijection; good enough a hash
+/// to find candidates that are then compared exactly.
+pub fn mix(mut z: u64) -> u64 {
     z = (z ^ (z >> 30)).wrapping_mul(0xbf58_476d_1ce4_e5b9);
     z = (z ^ (z >> 27)).wrapping_mul(0x94d0_49bb_1331_11eb);
     z ^ (z >> 31)

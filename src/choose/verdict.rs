@@ -4,7 +4,7 @@ use crate::choose::corner::corner;
 use crate::choose::corner_pruned::corner_pruned;
 use crate::choose::{Curve, Point};
 
-#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize)]
+#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize, serde::Deserialize)]
 #[serde(rename_all = "kebab-case")]
 pub enum Rule {
     Corner,
@@ -23,7 +23,7 @@ impl Rule {
 }
 
 /// One rule's view.
-#[derive(Debug, Clone, PartialEq, serde::Serialize)]
+#[derive(Debug, Clone, PartialEq, serde::Serialize, serde::Deserialize)]
 pub struct RuleResult {
     pub rule: Rule,
     /// The rule's own strength, not rounded to the sweep's; `None` where it does not apply.
@@ -61,7 +61,7 @@ impl RuleResult {
     }
 }
 
-#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize)]
+#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize, serde::Deserialize)]
 #[serde(rename_all = "kebab-case")]
 pub enum Verdict {
     /// The rules that apply lie within a factor of [`AGREED_FACTOR`].
@@ -80,7 +80,7 @@ pub const AGREED_FACTOR: f64 = 2.0;
 pub const UNDETERMINED_FACTOR: f64 = 10.0;
 
 /// The choice over a sweep.
-#[derive(Debug, Clone, PartialEq, serde::Serialize)]
+#[derive(Debug, Clone, PartialEq, serde::Serialize, serde::Deserialize)]
 pub struct Choice {
     /// The swept strength nearest to the decisive rule's, whose model is handed over.
     pub strength: f64,

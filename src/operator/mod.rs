@@ -3,12 +3,15 @@
 //! An operator works on blocks of lanes: v and s are n×k, u is m×k, row-major with lanes
 //! contiguous. A lane is one least-squares problem on the same matrix.
 
+pub mod build;
 pub mod rows;
+pub mod settle;
 pub mod stack;
 pub mod weighted;
 pub mod weights;
 
 pub use rows::{Precision, Row, StoredRows};
+pub use settle::Duplicates;
 pub use stack::Stacked;
 pub use weighted::Weighted;
 pub use weights::RowWeights;

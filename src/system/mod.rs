@@ -6,13 +6,21 @@
 
 mod assemble;
 mod error;
+pub mod facts;
+pub mod findings;
 mod lengths;
 mod names;
 mod reference;
 mod sigma;
+mod spread;
 mod stack;
+mod twins;
+mod visit;
 
 pub use error::SystemError;
+pub mod rays;
+pub use facts::Facts;
+pub use findings::{Finding, QuickFit, findings};
 
 use std::path::PathBuf;
 

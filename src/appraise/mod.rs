@@ -1,0 +1,3 @@
+//! What a reconstruction is worth: how well it fits.
+
+pub mod misfit;

@@ -1,0 +1,390 @@
+//! Conducts one solve or sweep from settings to a finished folder.
+
+use std::time::{Duration, Instant};
+
+use serde_json::Value;
+
+use crate::appraise::misfit;
+use crate::base::{Complaint, Warning};
+use crate::choose::{self, Choice, Curve, Point, Rule};
+use crate::files::Folder;
+use crate::job::load::{self, Loaded};
+use crate::job::rerun::{self, Standing};
+use crate::job::settings::{Command, Settings, StrengthsWanted};
+use crate::job::typed::{MethodName, RuleName, ScalingName};
+use crate::job::{JobError, write};
+use crate::operator::{Operator, Weighted};
+use crate::report::record::Summary;
+use crate::solve::direct::{self, Dense};
+use crate::solve::{Fault, Method, Solved, Stop, StopRules, Watch};
+use crate::sweep::{self, Condition, Request, Scaling, SetSweep, Strengths};
+use crate::system::{Facts, System};
+use crate::team::Threads;
+
+/// How a job ended.
+pub enum Finished {
+    New(Box<Summary>),
+    /// The folder held the finished result of the same command.
+    Before(Box<Value>),
+}
+
+/// Everything known when the numbers are done; `write` turns it into files.
+pub struct Run<'a> {
+    pub settings: &'a Settings,
+    pub system: &'a System,
+    pub facts: &'a Facts,
+    pub threads: &'a Threads,
+    pub strengths: Vec<f64>,
+    pub sets: Vec<SetSweep>,
+    /// One per data set; empty for a solve.
+    pub choices: Vec<Choice>,
+    /// Per data set and strength, where a decomposition is at hand.
+    pub traces: Option<Vec<Vec<f64>>>,
+    pub condition: Option<Condition>,
+    pub dense: Option<Dense>,
+    pub history: Vec<crate::solve::HistoryRow>,
+    pub passes: u64,
+    pub column_scaling: bool,
+    pub bytes_per_pass: u64,
+    pub workspace_bytes: u64,
+    pub interrupted: bool,
+    pub warnings: Vec<String>,
+    pub load_seconds: f64,
+    pub solve_seconds: f64,
+    pub begun: Instant,
+}
+
+impl Run<'_> {
+    /// Place in the sweep of the model handed over for a data set.
+    pub fn chosen_place(&self, set: usize) -> usize {
+        self.choices.get(set).map_or(0, |choice| choice.place)
+    }
+
+    pub fn chosen(&self, set: usize) -> &Solved {
+        &self.sets[set].solved[self.chosen_place(set)]
+    }
+}
+
+/// Loads, solves, chooses, appraises and writes.
+///
+/// # Errors
+/// Bad input, a folder that holds another run, a decomposition that would not fit, a computation
+/// that broke down in every data set, or a file that cannot be written.
+pub fn conduct(
+    settings: &Settings,
+    threads: &Threads,
+    watch: &dyn Watch,
+) -> Result<Finished, JobError> {
+    let begun = Instant::now();
+    let inputs = load::identities(&settings.source)?;
+    // Before anything is computed, and before the folder is made.
+    if settings.out.join("summary.json").exists() {
+        let folder = Folder::create(&settings.out)?;
+        if let Standing::Same(record) = rerun::standing(&folder, settings, &inputs)? {
+            return Ok(Finished::Before(record));
+        }
+    }
+    let Loaded { system, start, warnings } = load::load(&settings.source)?;
+    let facts = system.facts();
+    let load_seconds = begun.elapsed().as_secs_f64();
+    let work = Work { settings, system: &system, facts: &facts, start };
+    let mut run = work.run(threads, watch, begun)?;
+    run.load_seconds = load_seconds;
+    let read = warnings.iter().map(Warning::to_string);
+    run.warnings = read.chain(std::mem::take(&mut run.warnings)).collect();
+    let folder = Folder::create(&settings.out)?;
+    Ok(Finished::New(Box::new(write::write(&folder, &run, inputs)?)))
+}
+
+struct Work<'a> {
+    settings: &'a Settings,
+    system: &'a System,
+    facts: &'a Facts,
+    start: Option<ndarray::Array2<f64>>,
+}
+
+impl<'a> Work<'a> {
+    fn run(
+        &self,
+        threads: &'a Threads,
+        watch: &dyn Watch,
+        begun: Instant,
+    ) -> Result<Run<'a>, JobError> {
+        let settings = self.settings;
+        let solving = Instant::now();
+        let held = held(self.system);
+        let request = self.request(held.as_deref());
+        let mut run = Run {
+            settings,
+            system: self.system,
+            facts: self.facts,
+            threads,
+            strengths: Vec::new(),
+            sets: Vec::new(),
+            choices: Vec::new(),
+            traces: None,
+            condition: None,
+            dense: None,
+            history: Vec::new(),
+            passes: 0,
+            column_scaling: false,
+            bytes_per_pass: 0,
+            workspace_bytes: 0,
+            interrupted: false,
+            warnings: Vec::new(),
+            load_seconds: 0.0,
+            solve_seconds: 0.0,
+            begun,
+        };
+        let bare = Weighted::new(&self.system.matrix, &self.system.weights, None);
+        if settings.method == MethodName::Direct {
+            self.direct(&request, &mut run)?;
+            run.bytes_per_pass = bare.bytes_per_pass(run.strengths.len().min(32));
+        } else {
+            self.iterate(&request, watch, &mut run);
+            run.bytes_per_pass = bare.bytes_per_pass(run.sets.len().min(sweep::LANES_MAX));
+            self.exact_trace(&request, &mut run);
+        }
+        refuse_breakdown(self.system, &run.sets)?;
+        if settings.command == Command::Sweep {
+            run.choices = run.sets.iter().map(|set| choice(set, settings.rule)).collect();
+        }
+        self.warn(&mut run);
+        run.solve_seconds = solving.elapsed().as_secs_f64();
+        Ok(run)
+    }
+
+    fn request<'r>(&'r self, held: Option<&'r [bool]>) -> Request<'r> {
+        let system = self.system;
+        let settings = self.settings;
+        let (m, n) = (system.matrix.rows(), system.matrix.columns());
+        Request {
+            matrix: &system.matrix,
+            weights: &system.weights,
+            data: system.data.view(),
+            reference: system.reference.as_ref(),
+            start: self.start.as_ref(),
+            penalty: system.columns.penalty_weights.as_deref(),
+            held,
+            method: match settings.method {
+                MethodName::Lsmr => Method::Lsmr,
+                MethodName::Cgls => Method::Cgls,
+                MethodName::Lsqr | MethodName::Direct => Method::Lsqr,
+            },
+            scaling: match settings.column_scaling {
+                ScalingName::Auto => Scaling::Auto,
+                ScalingName::On => Scaling::On,
+                ScalingName::Off => Scaling::Off,
+            },
+            strengths: match settings.strengths {
+                StrengthsWanted::One(strength) => Strengths::Given(vec![strength]),
+                StrengthsWanted::Range { range, count } => {
+                    Strengths::between(range.from, range.to, count)
+                }
+                StrengthsWanted::Found { count } => Strengths::Found { count },
+            },
+            rules: StopRules {
+                gradient_tolerance: settings.gradient_tolerance,
+                residual_tolerance: settings.residual_tolerance,
+                noise_factor: settings.noise_factor,
+                max_iterations: settings
+                    .max_iterations
+                    .unwrap_or_else(|| StopRules::max_iterations_default(m, n)),
+                time_limit: settings.time_limit.map(|d| Duration::from_secs_f64(d.seconds)),
+            },
+        }
+    }
+
+    fn iterate(&self, request: &Request<'_>, watch: &dyn Watch, run: &mut Run<'_>) {
+        let sweep = sweep::run(request, watch);
+        let unscaled = sweep.plan.scales.is_none();
+        run.condition = match &sweep.sets[0].process {
+            Some(process) if unscaled => Condition::of_process(process),
+            _ => None,
+        };
+        run.strengths = sweep.strengths;
+        run.sets = sweep.sets;
+        run.history = sweep.history;
+        run.passes = sweep.passes;
+        run.column_scaling = sweep.plan.scaled;
+        run.workspace_bytes = sweep.workspace_bytes;
+        run.interrupted = sweep.interrupted.is_some();
+    }
+
+    fn direct(&self, request: &Request<'_>, run: &mut Run<'_>) -> Result<(), JobError> {
+        let (m, n) = (self.system.matrix.rows(), self.system.matrix.columns());
+        if !direct::fits(m, n) {
+            return Err(JobError::TooLarge(Complaint::new(
+                format!("--method direct would decompose a dense {m}×{n} array"),
+                format!(
+                    "use --method lsqr; direct takes up to {} numbers (m·n)",
+                    direct::DENSE_NUMBERS_MAX
+                ),
+            )));
+        }
+        if request.penalty.is_some_and(|p| {
+            p.iter().zip(0..).any(|(p, j)| *p == 0.0 && !request.held.is_some_and(|held| held[j]))
+        }) {
+            return Err(JobError::Usage(Complaint::new(
+                "--method direct needs a penalty on every unknown, and some have penalty_weight 0",
+                "use --method lsqr, or give them a small positive weight",
+            )));
+        }
+        let dense = sweep::dense::run(request).ok_or_else(|| {
+            JobError::BrokeDown(Complaint::new(
+                "the singular value decomposition did not converge",
+                "check the matrix for non-finite or enormous values with `ellbow inspect`",
+            ))
+        })?;
+        let distinct = dense.decompositions.len();
+        let trace = |set: usize, strength: f64| {
+            dense.decompositions[if distinct == 1 { 0 } else { set }].trace(strength)
+        };
+        run.traces = Some(
+            (0..dense.sets.len())
+                .map(|set| dense.strengths.iter().map(|&s| trace(set, s)).collect())
+                .collect(),
+        );
+        let mut decompositions = dense.decompositions;
+        let first = decompositions.swap_remove(0);
+        if request.penalty.is_none() && request.held.is_none() {
+            run.condition = Some(Condition { value: first.condition(), exact: true });
+        }
+        run.dense = Some(first);
+        run.strengths = dense.strengths;
+        run.sets = dense.sets;
+        run.passes = dense.passes;
+        Ok(())
+    }
+
+    /// On a small system: exact effective parameters, and the exact condition.
+    fn exact_trace(&self, request: &Request<'_>, run: &mut Run<'_>) {
+        let (m, n) = (self.system.matrix.rows(), self.system.matrix.columns());
+        let distinct = self.facts.column.weighted_square_sums.len();
+        let invertible = request.penalty.is_none() && request.held.is_none();
+        if !(direct::cheap(m, n) && distinct == 1 && invertible) {
+            return;
+        }
+        let bare = Weighted::new(&self.system.matrix, &self.system.weights, None);
+        if let Some(dense) = Dense::new(&bare, 0) {
+            run.condition = Some(Condition { value: dense.condition(), exact: true });
+            let traces: Vec<f64> = run.strengths.iter().map(|&s| dense.trace(s)).collect();
+            run.traces = Some(vec![traces; run.sets.len()]);
+        }
+    }
+
+    fn warn(&self, run: &mut Run<'_>) {
+        let smallest = run.strengths.iter().copied().fold(f64::INFINITY, f64::min);
+        if let Some(condition) = run.condition.filter(|_| smallest == 0.0) {
+            run.warnings.extend(condition_warning(condition));
+        }
+        let wide = self.system.matrix.rows() < self.system.matrix.columns();
+        if smallest == 0.0 && wide && run.dense.is_none() {
+            run.warnings.push(
+                "Strength 0 with fewer data than unknowns: of all models that fit, the one nearest to the start is found, and on the way the number of iterations acts as the regularisation. `ellbow sweep` looks at strengths above 0.".into(),
+            );
+        }
+        let stated = self.system.reference.is_some() || self.start.is_some();
+        for (set, facts) in self.facts.sets.iter().enumerate() {
+            if let Some(fit) = facts.constant.as_ref().filter(|fit| fit.share > 0.5)
+                && !stated
+                && smallest > 0.0
+            {
+                let of = if self.facts.sets.len() > 1 {
+                    format!("Data set {}: one", set + 1)
+                } else {
+                    "One".into()
+                };
+                run.warnings.push(format!(
+                    "{of} constant model of {:.6e} {} explains {:.1} % of the data (squared, weighted), but the penalty pulls towards 0: give --reference fit or --reference {:.4e}.",
+                    fit.value, self.system.units.model, 100.0 * fit.share, fit.value
+                ));
+            }
+        }
+        let penalised = self.system.columns.penalty_weights.as_ref();
+        let unseen = self.facts.empty_columns.len();
+        if unseen > 0 && penalised.is_none() {
+            run.warnings.push(format!(
+                "{unseen} of {} unknowns are touched by no datum: they stay at the reference and mean nothing.",
+                self.system.matrix.columns()
+            ));
+        }
+    }
+}
+
+fn condition_warning(condition: Condition) -> Option<String> {
+    let value = if condition.exact {
+        format!("{:.2e}", condition.value)
+    } else {
+        format!("at least {:.2e}", condition.value)
+    };
+    if condition.hopeless() {
+        Some(format!(
+            "The system is singular to working precision: its condition is {value}, beyond 1e13. At strength 0 the model is not determined in double precision and may be wrong in every digit. Scale or centre the columns, remove dependent ones, or use a strength above 0."
+        ))
+    } else if condition.value > 1e8 {
+        Some(format!(
+            "The condition of the system is {value}: at strength 0 about {:.0} of 16 digits are lost.",
+            condition.value.log10()
+        ))
+    } else {
+        None
+    }
+}
+
+/// Unknowns that the columns table fixes; their value is in the reference.
+fn held(system: &System) -> Option<Vec<bool>> {
+    let fixed = system.columns.fixed.as_ref()?;
+    let held: Vec<bool> = fixed.iter().map(|value| !value.is_nan()).collect();
+    held.iter().any(|held| *held).then_some(held)
+}
+
+fn refuse_breakdown(system: &System, sets: &[SetSweep]) -> Result<(), JobError> {
+    let fault = sets.iter().flat_map(|set| &set.solved).find_map(|solved| match solved.stop {
+        Stop::NotFinite(fault) => Some((solved, fault)),
+        _ => None,
+    });
+    let Some((solved, fault)) = fault else {
+        return Ok(());
+    };
+    let place = match fault {
+        Fault::Row(i) if i < system.matrix.rows() => system.row_name(i),
+        Fault::Row(i) => format!("the penalty on {}", system.column_name(i - system.matrix.rows())),
+        Fault::Column(j) => system.column_name(j),
+        Fault::Norm => "a norm".into(),
+    };
+    Err(JobError::BrokeDown(Complaint::new(
+        format!(
+            "a number stopped being finite in iteration {} at strength {}: {place}",
+            solved.iterations + 1,
+            solved.strength
+        ),
+        "look at that place with `ellbow inspect`: values beyond 1e154 overflow when squared",
+    )))
+}
+
+fn choice(set: &SetSweep, rule: Option<RuleName>) -> Choice {
+    let points: Vec<Point> = set
+        .solved
+        .iter()
+        .map(|solved| Point {
+            strength: solved.strength,
+            residual_norm: solved.residual_norm,
+            penalty_norm: solved.penalty_norm,
+            converged: solved.stop.converged(),
+        })
+        .collect();
+    let wanted = rule.map(|rule| match rule {
+        RuleName::Corner => Rule::Corner,
+        RuleName::CornerPruned => Rule::CornerPruned,
+    });
+    choose::choose(&Curve { points: &points, process: set.process.as_ref() }, wanted)
+}
+
+/// χ² per degree of freedom of one track, where σ and the trace are known.
+pub fn chi_square(run: &Run<'_>, set: usize, place: usize) -> Option<f64> {
+    let trace = run.traces.as_ref()?[set][place];
+    run.system.uncertainty.as_ref()?;
+    let solved = &run.sets[set].solved[place];
+    misfit::chi_square_per_dof(solved.residual_norm, run.facts.sets[set].data, trace)
+}

@@ -1,0 +1,4 @@
+//! Renders records as text. Computes nothing, prints nothing: the caller gets strings.
+
+pub mod page;
+pub mod record;

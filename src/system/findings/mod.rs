@@ -1,0 +1,198 @@
+//! What looks wrong with a system, and what to do about it.
+//!
+//! Each family of findings has one file, with its reasoning and the origin of its thresholds at
+//! the top. Two principles hold for all:
+//!
+//! - **A suspicion must repair something.** A hypothesis (index shifted, axes exchanged, sign,
+//!   factor) is named only if the system makes sense under it and does not as stated. Kernels to
+//!   which the test does not apply fail it under every hypothesis and are left alone.
+//! - **Chance is counted.** Repeats are set against the repeats that the data show anyway.
+
+mod columns;
+mod coverage;
+mod layout;
+mod layout_score;
+mod naming;
+mod noise;
+mod repeats;
+mod size;
+
+use rayon::prelude::*;
+
+use super::{Facts, System};
+
+/// What a finding is about. Serialised as a word, e.g. `wrong-fastest-axis`.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Hash, PartialOrd, Ord, serde::Serialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum Kind {
+    /// Data in another unit than the matrix, e.g. milliseconds for seconds.
+    DataUnits,
+    /// Data of the opposite sign.
+    DataSign,
+    /// Values no expert of the field would call possible, for no reason that can be named.
+    ImplausibleSize,
+    /// Columns numbered from another base.
+    IndexShift,
+    /// The grid's shape with its axes exchanged.
+    AxesSwapped,
+    /// The cell number runs fastest along another axis.
+    WrongFastestAxis,
+    /// One of the two above; with equal spacings no matrix can tell which.
+    GridOrder,
+    /// Variances where standard deviations are expected.
+    VarianceForSigma,
+    /// σ a factor 100 off: percent and fraction mistaken for each other.
+    PercentForFraction,
+    /// Residuals and σ disagree by another factor.
+    SigmaMisfit,
+    /// Data in another order than the rows of the matrix.
+    PermutedRows,
+    /// A group or run of rows whose data do not move.
+    DeadDetector,
+    /// Rows that are there twice with their data.
+    DuplicatedRows,
+    /// A column far out of scale with its peers.
+    ColumnUnits,
+    /// Data in rows without entries.
+    UnexplainableRows,
+    /// Unknowns that no row sees.
+    EmptyColumns,
+    /// Unknowns that all rows see alike.
+    EqualColumns,
+    /// The same row measured more than once.
+    RepeatedRows,
+    /// Column norms that span more than a factor 100.
+    ColumnScaling,
+}
+
+/// How much a finding should worry its reader.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, PartialOrd, Ord, serde::Serialize)]
+#[serde(rename_all = "kebab-case")]
+pub enum Severity {
+    /// Almost certainly a mistake; a solve would be wasted.
+    Fault,
+    /// Likely a mistake, or something only the user can settle.
+    Caution,
+    /// Worth knowing; nothing need be wrong.
+    Note,
+}
+
+/// A number a finding rests on.
+#[derive(Debug, Clone, PartialEq, serde::Serialize)]
+pub struct Evidence {
+    /// What the number is, e.g. `noise against stated uncertainty`.
+    pub name: &'static str,
+    pub value: f64,
+    /// Empty for a pure number.
+    pub unit: String,
+}
+
+#[derive(Debug, Clone, PartialEq, serde::Serialize)]
+pub struct Finding {
+    pub kind: Kind,
+    pub severity: Severity,
+    /// What is seen, in words of the user's own quantities.
+    pub sentence: String,
+    pub evidence: Vec<Evidence>,
+    /// Names of rows or columns, at most [`PLACES_MAX`].
+    pub places: Vec<String>,
+    pub remedy: String,
+}
+
+/// Most places a finding lists.
+pub const PLACES_MAX: usize = 8;
+
+impl Finding {
+    fn new(kind: Kind, severity: Severity, sentence: String, remedy: impl Into<String>) -> Self {
+        let remedy = remedy.into();
+        Self { kind, severity, sentence, evidence: Vec::new(), places: Vec::new(), remedy }
+    }
+
+    fn with(mut self, name: &'static str, value: f64) -> Self {
+        self.evidence.push(Evidence { name, value, unit: String::new() });
+        self
+    }
+
+    fn with_unit(mut self, name: &'static str, value: f64, unit: &str) -> Self {
+        self.evidence.push(Evidence { name, value, unit: unit.to_string() });
+        self
+    }
+
+    fn at(mut self, places: impl Iterator<Item = String>) -> Self {
+        self.places = places.take(PLACES_MAX).collect();
+        self
+    }
+}
+
+/// A short solve at the strength that robust GCV chooses, for one data set: what the data look
+/// like once a reasonable model is taken out of them.
+#[derive(Debug, Clone, PartialEq, serde::Serialize)]
+pub struct QuickFit {
+    pub data_set: usize,
+    pub strength: f64,
+    /// tr H at that strength.
+    pub effective_parameters: f64,
+    /// m‖W(Ax−b)‖²/(m − tr H)² at that strength, m the data that count.
+    pub gcv: f64,
+    /// x, length n, model unit.
+    pub model: Vec<f64>,
+    /// b − Ax, length m, data unit.
+    pub residual: Vec<f64>,
+}
+
+/// Everything that looks wrong or is worth knowing, gravest first, in a fixed order.
+///
+/// `fit` widens what can be seen: without it nothing is said of σ and of the order of the data.
+/// The cost is bounded: the layout of the grid is judged from a sample of rows; the matrix is
+/// visited once more only where a reference is to be compared with the data.
+///
+/// # Panics
+/// If `facts` or `fit` belong to another system.
+pub fn findings(system: &System, facts: &Facts, fit: Option<&QuickFit>) -> Vec<Finding> {
+    assert_eq!(facts.rows, system.matrix.rows(), "facts of this system");
+    if let Some(fit) = fit {
+        assert_eq!(fit.model.len(), facts.columns, "a fit of this system");
+        assert_eq!(fit.residual.len(), facts.rows, "a fit of this system");
+        assert!(fit.data_set < facts.data_sets, "a fit of this system");
+    }
+    let mut found = Vec::new();
+    found.extend(layout::find(system));
+    found.extend(naming::find(system));
+    let size = size::find(system, facts, fit);
+    let size_is_known = size.is_settled();
+    found.extend(size.findings);
+    found.extend(columns::find(system, facts));
+    let repeats = repeats::find(system, facts);
+    let dead = repeats.iter().any(|finding| finding.kind == Kind::DeadDetector);
+    found.extend(repeats);
+    if let Some(fit) = fit {
+        let known = noise::Known { size: size_is_known, dead };
+        found.extend(noise::find(system, facts, fit, known));
+    }
+    found.extend(coverage::find(system, facts));
+    found.sort_by_key(|finding| finding.severity);
+    found
+}
+
+/// A x_ref of data set `set`; `None` without a reference. Rows are independent, so the bits do
+/// not depend on threads.
+fn predicted_by_reference(system: &System, set: usize) -> Option<Vec<f64>> {
+    let reference = system.reference.as_ref()?;
+    let model = reference.column(if reference.ncols() == 1 { 0 } else { set });
+    let product = |i| system.matrix.row(i).entries().map(|(j, a)| a * model[j]).sum();
+    Some((0..system.matrix.rows()).into_par_iter().map(product).collect())
+}
+
+/// wᵢ·valueᵢ for each row.
+fn weighted(system: &System, set: usize, value: impl Fn(usize) -> f64) -> Vec<f64> {
+    (0..system.matrix.rows())
+        .map(|i| match system.weights.at(i, set) {
+            // Not even a value that is not finite counts where the weight is 0.
+            0.0 => 0.0,
+            w => w * value(i),
+        })
+        .collect()
+}
+
+#[cfg(test)]
+mod tests;

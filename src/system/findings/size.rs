@@ -1,0 +1,245 @@
+//! Whether data and matrix speak of the same size and sign.
+//!
+//! Three witnesses, in order; the first that accuses is heard:
+//!
+//! 1. *A reference model.* Data and A x_ref are compared by their regression slope. It counts if
+//!    their correlation exceeds 0.7 in size, i.e. the reference explains half of ‖Wb‖². A
+//!    negative one says the sign is wrong; a slope off by 30 or more (no reference worth the name
+//!    is) that the unit is.
+//! 2. *One constant.* Where no entry is negative, the constant that fits best is an average of
+//!    the true unknowns with weights that are not negative, whatever the model. So it lies within
+//!    the range of values called plausible, up to noise: five standard deviations, taken from the
+//!    misfit of the constant fit itself, which contains more than noise.
+//! 3. *A quick fit.* The share of the model's size that lies outside the plausible range. A
+//!    regularised model overshoots by a tenth or two of its size; 0.25 is beyond that.
+//!
+//! A sign or a factor between units is named only if it brings the value back into the range.
+
+use super::{Finding, Kind, QuickFit, Severity, predicted_by_reference, weighted};
+use crate::base::sums::dot;
+use crate::system::{Facts, System};
+
+const CORRELATION_MIN: f64 = 0.7;
+const SLOPE_OFF_MIN: f64 = 30.0;
+const DEVIATIONS: f64 = 5.0;
+const OUTSIDE_MIN: f64 = 0.25;
+/// A hypothesis must remove three quarters of what lies outside.
+const OUTSIDE_LEFT_MAX: f64 = 0.25;
+/// Overshoot allowed beyond the range, as a part of its width, before a factor is suspected.
+const WIDENED: f64 = 0.2;
+
+/// Data over what they should be: milli, micro, percent, minutes, hours, and back.
+const FACTORS: [(f64, &str); 10] = [
+    (1e3, "milliseconds for seconds"),
+    (1e-3, "kilometres for metres"),
+    (1e6, "micro-units for units"),
+    (1e-6, "units for micro-units"),
+    (1e2, "centimetres for metres"),
+    (1e-2, "metres for centimetres"),
+    (60.0, "seconds for minutes"),
+    (1.0 / 60.0, "minutes for seconds"),
+    (3600.0, "seconds for hours"),
+    (1.0 / 3600.0, "hours for seconds"),
+];
+
+pub(super) struct Size {
+    pub findings: Vec<Finding>,
+    tested: bool,
+}
+
+impl Size {
+    /// Whether there was anything to judge the size by.
+    pub fn is_settled(&self) -> bool {
+        self.tested
+    }
+}
+
+pub(super) fn find(system: &System, facts: &Facts, fit: Option<&QuickFit>) -> Size {
+    let mut size = Size { findings: Vec::new(), tested: false };
+    for set in 0..facts.data_sets {
+        let witnesses = [
+            against_reference(system, facts, set),
+            against_constant(system, facts, set),
+            fit.filter(|fit| fit.data_set == set).and_then(|fit| against_fit(system, fit)),
+        ];
+        for verdict in witnesses.into_iter().flatten() {
+            size.tested = true;
+            if let Verdict::Accused(finding) = verdict {
+                size.findings.push(*finding);
+                return size;
+            }
+        }
+    }
+    size
+}
+
+/// What a witness that can speak has to say.
+enum Verdict {
+    Sound,
+    Accused(Box<Finding>),
+}
+
+fn accuse(finding: Finding) -> Option<Verdict> {
+    Some(Verdict::Accused(Box::new(finding)))
+}
+
+const SIGN_REMEDY: &str = "check the sign convention of the data (observed minus predicted, or the reverse; up or down positive) against the matrix";
+const UNIT_REMEDY: &str = "convert the data to the unit in which the matrix predicts them, and their uncertainty with them";
+
+fn against_reference(system: &System, facts: &Facts, set: usize) -> Option<Verdict> {
+    let predicted = predicted_by_reference(system, set)?;
+    let p = weighted(system, set, |i| predicted[i]);
+    let b = weighted(system, set, |i| system.data[[i, set]]);
+    let (pp, pb) = (dot(&p, &p), dot(&p, &b));
+    let bb = facts.sets[set].weighted_data_square;
+    let correlation = pb / (pp * bb).sqrt();
+    let slope = pb / pp;
+    if !(correlation.abs() >= CORRELATION_MIN && slope.is_finite()) {
+        return None;
+    }
+    let kind = if slope.abs() >= SLOPE_OFF_MIN || slope.abs() <= 1.0 / SLOPE_OFF_MIN {
+        Kind::DataUnits
+    } else if slope < 0.0 {
+        Kind::DataSign
+    } else {
+        return Some(Verdict::Sound);
+    };
+    let (sentence, remedy) = if kind == Kind::DataSign {
+        (
+            "The data are what the reference model predicts, but with the opposite sign."
+                .to_string(),
+            SIGN_REMEDY,
+        )
+    } else {
+        let sentence = format!(
+            "The data are about {} times what the reference model predicts{}.",
+            number(slope.abs()),
+            example(slope.abs())
+        );
+        (sentence, UNIT_REMEDY)
+    };
+    accuse(
+        Finding::new(kind, Severity::Fault, sentence, remedy)
+            .with("slope of the data over those of the reference model", slope)
+            .with("their correlation", correlation),
+    )
+}
+
+fn against_constant(system: &System, facts: &Facts, set: usize) -> Option<Verdict> {
+    let (low, high) = system.units.plausible?;
+    let of_set = &facts.sets[set];
+    let constant = of_set.constant?;
+    let one_sign = facts.row.sum.iter().zip(&facts.row.absolute_sum).all(|(s, a)| s == a);
+    if !one_sign || constant.share <= 0.0 {
+        return None;
+    }
+    let spare = ((1.0 - constant.share).max(0.0) / constant.share / of_set.data as f64).sqrt();
+    let spare = DEVIATIONS * constant.value.abs() * spare;
+    let inside = |value: f64, spare: f64| value >= low - spare && value <= high + spare;
+    if inside(constant.value, spare) {
+        return Some(Verdict::Sound);
+    }
+    let unit = &system.units.model;
+    let seen = format!(
+        "The one value that fits all data best is {} {unit}, outside the plausible {} to {} {unit}",
+        number(constant.value),
+        number(low),
+        number(high)
+    );
+    let finding = if inside(-constant.value, 0.0) {
+        let sentence = format!("{seen}; with the opposite sign it would lie inside.");
+        Finding::new(Kind::DataSign, Severity::Fault, sentence, SIGN_REMEDY)
+    } else if let Some((factor, word)) =
+        FACTORS.iter().find(|(factor, _)| inside(constant.value / factor, spare / factor))
+    {
+        let sentence = format!(
+            "{seen}; data divided by {} would bring it inside (e.g. {word}).",
+            number(*factor)
+        );
+        Finding::new(Kind::DataUnits, Severity::Fault, sentence, UNIT_REMEDY)
+    } else {
+        let remedy = "check the units of data, matrix and plausible range against each other";
+        Finding::new(Kind::ImplausibleSize, Severity::Caution, format!("{seen}."), remedy)
+    };
+    accuse(
+        finding
+            .with_unit("one value for all unknowns", constant.value, unit)
+            .with("share of the data it explains", constant.share),
+    )
+}
+
+fn against_fit(system: &System, fit: &QuickFit) -> Option<Verdict> {
+    let (low, high) = system.units.plausible?;
+    let is_free = |j: usize| {
+        let fixed = system.columns.fixed.as_ref();
+        fixed.is_none_or(|values| values[j].is_nan()) && system.columns.is_cell(j)
+    };
+    let values: Vec<f64> =
+        (0..fit.model.len()).filter(|&j| is_free(j)).map(|j| fit.model[j]).collect();
+    let outside = |factor: f64, spare: f64| {
+        let (low, high) = (low - spare, high + spare);
+        let beyond = |x: f64| (low - x).max(x - high).max(0.0);
+        let total: f64 = values.iter().map(|x| (factor * x).abs()).sum();
+        if total > 0.0 {
+            values.iter().map(|x| beyond(factor * x)).sum::<f64>() / total
+        } else {
+            0.0
+        }
+    };
+    let share = outside(1.0, 0.0);
+    if share < OUTSIDE_MIN {
+        return Some(Verdict::Sound);
+    }
+    let spare = WIDENED * (high - low);
+    let unit = &system.units.model;
+    let seen = format!(
+        "Of a first model's size, {} % lies outside the plausible {} to {} {unit}",
+        (100.0 * share).round(),
+        number(low),
+        number(high)
+    );
+    let finding = if outside(-1.0, 0.0) <= OUTSIDE_LEFT_MAX * share {
+        let sentence = format!("{seen}; with data of the opposite sign nearly none would.");
+        Finding::new(Kind::DataSign, Severity::Fault, sentence, SIGN_REMEDY)
+    } else if outside(1.0, spare) < OUTSIDE_MIN {
+        return Some(Verdict::Sound);
+    } else if let Some((factor, word)) =
+        FACTORS.iter().find(|(factor, _)| outside(1.0 / factor, spare) <= OUTSIDE_LEFT_MAX * share)
+    {
+        let sentence = format!(
+            "{seen}; with data divided by {} nearly none would (e.g. {word}).",
+            number(*factor)
+        );
+        Finding::new(Kind::DataUnits, Severity::Fault, sentence, UNIT_REMEDY)
+    } else {
+        let remedy = "check the units of data, matrix and plausible range against each other";
+        Finding::new(Kind::ImplausibleSize, Severity::Caution, format!("{seen}."), remedy)
+    };
+    accuse(finding.with("share of a first model's size outside the plausible range", share))
+}
+
+/// A factor between units close by, in words.
+fn example(slope: f64) -> String {
+    let near = |factor: f64| (slope / factor).ln().abs() < 0.5;
+    FACTORS
+        .iter()
+        .find(|(factor, _)| near(*factor))
+        .map_or_else(String::new, |(_, word)| format!(" (e.g. {word})"))
+}
+
+/// Four digits, in powers of ten where that is shorter.
+pub(super) fn number(value: f64) -> String {
+    let size = value.abs();
+    if value == 0.0 || (1e-3..1e6).contains(&size) {
+        let digits =
+            if size == 0.0 { 0 } else { (3 - size.log10().floor() as i32).max(0) as usize };
+        let text = format!("{value:.digits$}");
+        if text.contains('.') {
+            text.trim_end_matches('0').trim_end_matches('.').to_string()
+        } else {
+            text
+        }
+    } else {
+        format!("{value:.3e}")
+    }
+}
