@@ -19,8 +19,8 @@ use flate2::{Compression, read::MultiGzDecoder, write::GzEncoder};
 use ndarray::Array1;
 
 const SEED: u64 = 1;
-const SOURCES: usize = 18;
-const RECEIVERS: usize = 20;
+const SOURCES: usize = 24;
+const RECEIVERS: usize = 25;
 /// One standard deviation of a picked time.
 const SIGMA_S: f64 = 4e-4;
 /// Times are kept to the microsecond, as a recorder with a 1 MHz clock would.
@@ -33,11 +33,11 @@ fn grid() -> Grid {
 }
 
 fn source_depth_m(source: usize) -> f64 {
-    1.25 + 1.625 * source as f64
+    1.25 + 1.2 * source as f64
 }
 
 fn receiver_depth_m(receiver: usize) -> f64 {
-    0.75 + 1.5 * receiver as f64
+    0.75 + 1.2 * receiver as f64
 }
 
 /// Row order: all receivers of the first source, then of the next.
@@ -217,17 +217,17 @@ fn every_ray_crosses_the_whole_section() {
     for (chord, segment) in demo.rays.chords.iter().zip(segments()) {
         assert!((chord - segment.length()).abs() <= 1e-12 * chord);
     }
-    assert_eq!(demo.rays.matrix.rows(), 360);
+    assert_eq!(demo.rays.matrix.rows(), 600);
     assert_eq!(demo.rays.matrix.columns(), 2400);
     let mut rays_of_cell = vec![0; 2400];
-    for i in 0..360 {
+    for i in 0..600 {
         for (j, _) in demo.rays.matrix.row(i).entries() {
             rays_of_cell[j] += 1;
         }
     }
     // Strips above the shallowest and below the deepest points see no ray.
-    assert_eq!(demo.rays.matrix.entries(), 21_138);
-    assert_eq!(rays_of_cell.iter().filter(|&&rays| rays == 0).count(), 156);
+    assert_eq!(demo.rays.matrix.entries(), 35_554);
+    assert_eq!(rays_of_cell.iter().filter(|&&rays| rays == 0).count(), 107);
 }
 
 #[test]

@@ -5,6 +5,7 @@
 
 pub mod corner;
 pub mod corner_pruned;
+pub mod noise_plain;
 pub mod verdict;
 
 pub use verdict::{Choice, Rule, RuleResult, Verdict, choose};
@@ -28,4 +29,6 @@ pub struct Curve<'a> {
     pub points: &'a [Point],
     /// Scalars from which ρ, η and dη/dλ follow at any strength; present for a fan.
     pub process: Option<&'a Process>,
+    /// Number of data of positive weight, where σ is stated.
+    pub data_of_known_noise: Option<usize>,
 }

@@ -2,6 +2,7 @@
 
 use crate::choose::corner::corner;
 use crate::choose::corner_pruned::corner_pruned;
+use crate::choose::noise_plain::noise_plain;
 use crate::choose::{Curve, Point};
 
 #[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize, serde::Deserialize)]
@@ -9,15 +10,15 @@ use crate::choose::{Curve, Point};
 pub enum Rule {
     Corner,
     CornerPruned,
+    NoisePlain,
 }
 
 impl Rule {
-    pub const ALL: [Self; 2] = [Self::Corner, Self::CornerPruned];
-
     pub fn word(self) -> &'static str {
         match self {
             Self::Corner => "corner",
             Self::CornerPruned => "corner-pruned",
+            Self::NoisePlain => "noise-plain",
         }
     }
 }
@@ -95,11 +96,12 @@ pub struct Choice {
     pub reasons: Vec<String>,
 }
 
-/// Applies every rule; `wanted` makes one decisive, else the curvature corner is, else the pruned one.
+/// Applies every rule; `wanted` makes one decisive. Else the noise level is where σ is stated, then
+/// the curvature corner, then the pruned one: on test problems a corner was within twice the best error less often.
 ///
 /// Panics on a sweep without points.
 pub fn choose(curve: &Curve<'_>, wanted: Option<Rule>) -> Choice {
-    let rules = vec![corner(curve), corner_pruned(curve)];
+    let rules = vec![noise_plain(curve), corner(curve), corner_pruned(curve)];
     let applicable: Vec<&RuleResult> = rules.iter().filter(|r| r.applicable).collect();
     let inner = |r: &&&RuleResult| !r.at_edge;
     let decisive = match wanted {
@@ -130,12 +132,21 @@ pub fn choose(curve: &Curve<'_>, wanted: Option<Rule>) -> Choice {
             "The model at the chosen strength has not converged: raise --max-iterations.".into(),
         );
     }
-    reasons.push(
-        "A corner tends to under-smooth: expect more detail and more noise than the data support."
-            .into(),
-    );
+    reasons.extend(rule.map(|rule| character(rule).to_owned()));
     let strength = curve.points[place].strength;
     Choice { strength, place, rule, rules, spread_decades, verdict, reasons }
+}
+
+/// What a reader must know of the decisive rule.
+fn character(rule: Rule) -> &'static str {
+    match rule {
+        Rule::Corner | Rule::CornerPruned => {
+            "A corner tends to under-smooth: expect more detail and more noise than the data support."
+        }
+        Rule::NoisePlain => {
+            "The plain noise level tends to over-smooth, and is only as good as the stated uncertainty."
+        }
+    }
 }
 
 fn spread(applicable: &[&RuleResult]) -> f64 {

@@ -44,6 +44,8 @@ pub struct Run<'a> {
     pub dense: Option<Dense>,
     pub history: Vec<crate::solve::HistoryRow>,
     pub passes: u64,
+    /// Of the slowest track, added over groups that ran one after the other.
+    pub iterations: u64,
     pub column_scaling: bool,
     pub bytes_per_pass: u64,
     pub workspace_bytes: u64,
@@ -127,6 +129,7 @@ impl<'a> Work<'a> {
             dense: None,
             history: Vec::new(),
             passes: 0,
+            iterations: 0,
             column_scaling: false,
             bytes_per_pass: 0,
             workspace_bytes: 0,
@@ -147,7 +150,9 @@ impl<'a> Work<'a> {
         }
         refuse_breakdown(self.system, &run.sets)?;
         if settings.command == Command::Sweep {
-            run.choices = run.sets.iter().map(|set| choice(set, settings.rule)).collect();
+            run.choices = (0..run.sets.len())
+                .map(|set| choice(&run.sets[set], settings.rule, self.known_noise(set)))
+                .collect();
         }
         self.warn(&mut run);
         run.solve_seconds = solving.elapsed().as_secs_f64();
@@ -206,6 +211,7 @@ impl<'a> Work<'a> {
         run.sets = sweep.sets;
         run.history = sweep.history;
         run.passes = sweep.passes;
+        run.iterations = sweep.iterations;
         run.column_scaling = sweep.plan.scaled;
         run.workspace_bytes = sweep.workspace_bytes;
         run.interrupted = sweep.interrupted.is_some();
@@ -271,6 +277,12 @@ impl<'a> Work<'a> {
             let traces: Vec<f64> = run.strengths.iter().map(|&s| dense.trace(s)).collect();
             run.traces = Some(vec![traces; run.sets.len()]);
         }
+    }
+
+    /// Number of data of a set, where all have a stated σ.
+    fn known_noise(&self, set: usize) -> Option<usize> {
+        let stated = self.settings.source.blocks.iter().all(|block| block.uncertainty.is_some());
+        stated.then_some(self.facts.sets[set].data)
     }
 
     fn warn(&self, run: &mut Run<'_>) {
@@ -363,7 +375,7 @@ fn refuse_breakdown(system: &System, sets: &[SetSweep]) -> Result<(), JobError> 
     )))
 }
 
-fn choice(set: &SetSweep, rule: Option<RuleName>) -> Choice {
+fn choice(set: &SetSweep, rule: Option<RuleName>, known_noise: Option<usize>) -> Choice {
     let points: Vec<Point> = set
         .solved
         .iter()
@@ -377,14 +389,20 @@ fn choice(set: &SetSweep, rule: Option<RuleName>) -> Choice {
     let wanted = rule.map(|rule| match rule {
         RuleName::Corner => Rule::Corner,
         RuleName::CornerPruned => Rule::CornerPruned,
+        RuleName::NoisePlain => Rule::NoisePlain,
     });
-    choose::choose(&Curve { points: &points, process: set.process.as_ref() }, wanted)
+    let curve =
+        Curve { points: &points, process: set.process.as_ref(), data_of_known_noise: known_noise };
+    choose::choose(&curve, wanted)
 }
 
 /// χ² per degree of freedom of one track, where σ and the trace are known.
 pub fn chi_square(run: &Run<'_>, set: usize, place: usize) -> Option<f64> {
     let trace = run.traces.as_ref()?[set][place];
-    run.system.uncertainty.as_ref()?;
+    let stated = run.settings.source.blocks.iter().all(|block| block.uncertainty.is_some());
+    if !stated {
+        return None;
+    }
     let solved = &run.sets[set].solved[place];
     misfit::chi_square_per_dof(solved.residual_norm, run.facts.sets[set].data, trace)
 }

@@ -94,8 +94,8 @@ pub struct Typed {
     #[arg(long, value_name = "N", help_heading = "Strength")]
     pub strength_count: Option<usize>,
 
-    /// Rule that decides: corner or corner-pruned [default: corner where it
-    /// applies, else corner-pruned]
+    /// Rule that decides: noise-plain, corner or corner-pruned [default: the first
+    /// of these that applies]
     #[arg(long, value_name = "NAME", help_heading = "Strength")]
     pub rule: Option<RuleName>,
 
@@ -284,7 +284,7 @@ macro_rules! words {
 words!(Missing { Nan = "nan" });
 words!(Duplicates { Sum = "sum", Error = "error", Last = "last" });
 words!(Precision { Double = "double", Single = "single" });
-words!(RuleName { Corner = "corner", CornerPruned = "corner-pruned" });
+words!(RuleName { Corner = "corner", CornerPruned = "corner-pruned", NoisePlain = "noise-plain" });
 words!(MethodName { Lsqr = "lsqr", Lsmr = "lsmr", Cgls = "cgls", Direct = "direct" });
 words!(ScalingName { Auto = "auto", On = "on", Off = "off" });
 

@@ -228,7 +228,7 @@ fn summary(run: &Run<'_>, inputs: Vec<InputRecord>, sweep: Vec<SweepRow>) -> Sum
             .unwrap_or_default(),
         strength: one_strength.then_some(first),
         penalty: run.settings.penalty.into(),
-        result: together(&sets),
+        result: ResultRecord { iterations: run.iterations, ..together(&sets) },
         passes: run.passes,
         column_scaling: run.column_scaling,
         condition: run.condition.map(|condition| ConditionRecord {

@@ -78,6 +78,7 @@ pub struct SystemRecord {
 #[derive(Debug, Clone, Serialize, Deserialize)]
 pub struct ResultRecord {
     pub stop: StopRecord,
+    /// Of a data set: of the model handed over. Of the whole run: of the slowest strength.
     pub iterations: u64,
     /// ‖W(b − Ax)‖.
     pub residual_norm: f64,
