@@ -353,6 +353,30 @@ fn arrays_are_read_column_by_column() {
     says(&message, &["line 6", "holds 3 entries, but line 2 declares 4"]);
 }
 
+/// An array's places are worked out per piece of text; values too many must not get one.
+#[test]
+fn arrays_of_several_pieces_with_a_value_too_many() {
+    let desk = Desk::new();
+    for (symmetry, n, count) in
+        [("general", 400, 160_000), ("symmetric", 500, 125_250), ("skew-symmetric", 500, 124_750)]
+    {
+        let text = |values: usize| {
+            format!(
+                "%%MatrixMarket matrix array real {symmetry}\n{n} {n}\n{}",
+                "0.5\n".repeat(values)
+            )
+        };
+        let mirrored = if symmetry == "symmetric" { count - n } else { 0 };
+        let mirrored = if symmetry == "skew-symmetric" { count } else { mirrored };
+        assert_eq!(desk.accept(text(count)).value.entries(), count + mirrored);
+        for values in [count + 1, count + 200_000] {
+            let message = desk.refuse(text(values));
+            says(&message, &[&format!("line {}", count + 3), &format!("declares {count} entries")]);
+        }
+        says(&desk.refuse(text(count - 1)), &[&format!("holds {} entries", count - 1)]);
+    }
+}
+
 #[test]
 fn a_header_that_claims_more_than_the_bytes_could_hold() {
     let desk = Desk::new();

@@ -4,7 +4,7 @@ use std::io::Write;
 use std::path::PathBuf;
 
 use ellbow::files::vector::{self, NonFinite, read_active};
-use ellbow::files::{FileError, Folder, table};
+use ellbow::files::{FileError, Folder, read_text, table};
 use ndarray::array;
 
 struct Desk(tempfile::TempDir);
@@ -252,4 +252,13 @@ fn tables_with_a_fault() {
     says(&complaint(outcome), &["line 2", "not UTF-8"]);
     says(&complaint(table::read_rows(&desk.file(b"\x1f\x8b\x08"), 1)), &["format is not known"]);
     says(&complaint(table::read_rows(&desk.file("\u{feff}\n"), 1)), &["the table is empty"]);
+}
+
+#[test]
+fn whole_texts() {
+    let desk = Desk::new();
+    assert_eq!(read_text(&desk.file("\u{feff}a = 1\n"), 100).unwrap(), "a = 1\n");
+    let outcome = read_text(&desk.file(b"a\nb \xff\nc"), 100);
+    says(&complaint(outcome), &["line 2", "not UTF-8", "text: b \u{fffd}"]);
+    says(&complaint(read_text(&desk.file("12345"), 4)), &["5 bytes long, more than 4"]);
 }
