@@ -13,7 +13,8 @@ use super::matrix::{ReadOptions, Settling, repeated_warning};
 use super::source::Source;
 use super::{Facts, FileError, Loaded};
 use crate::base::Complaint;
-use crate::operator::build::{Feeder, Keep, RowCounts, RunCounter};
+use crate::operator::build::{Feeder, RowCounts, RunCounter};
+use crate::operator::keep::Keep;
 use crate::operator::settle::Settled;
 use crate::operator::{Precision, StoredRows};
 

@@ -1,6 +1,7 @@
 //! Linear operators: what the solvers multiply with.
 
 pub mod build;
+pub mod keep;
 pub mod rows;
 pub mod settle;
 pub mod weights;

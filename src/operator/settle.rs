@@ -6,7 +6,7 @@
 use rayon::prelude::*;
 use sprs::CsMatI;
 
-use super::build::Keep;
+use super::keep::Keep;
 use super::rows::{StoredRows, Value};
 
 /// What several entries at the same row and column mean.
