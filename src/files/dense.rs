@@ -7,7 +7,8 @@ use super::npy::Header;
 use super::source::Source;
 use super::{Facts, FileError, Loaded};
 use crate::base::Complaint;
-use crate::operator::build::{Feeder, Keep, RowCounts, RunCounter};
+use crate::operator::build::{Feeder, RowCounts, RunCounter};
+use crate::operator::keep::Keep;
 use crate::operator::{Precision, StoredRows};
 
 /// Elements decoded at once.

@@ -81,7 +81,13 @@ impl Folder {
     /// As [`Folder::create`], or what the gate says.
     pub fn create_gated(path: &Path, gate: Arc<dyn Gate>) -> Result<Self, FileError> {
         let folder = Self { path: path.to_path_buf(), gate };
-        folder.step(Step::CreateFolder, path, || fs::create_dir_all(path))?;
+        if !path.is_dir() {
+            folder.step(Step::CreateFolder, path, || fs::create_dir_all(path))?;
+            // Its own entry must survive as well as what it will hold.
+            let above = path.parent().filter(|above| !above.as_os_str().is_empty());
+            let above = above.unwrap_or(Path::new("."));
+            folder.step(Step::SyncFolder, path, || sync_folder(above))?;
+        }
         Ok(folder)
     }
 
@@ -271,8 +277,7 @@ mod tests {
             let path = home.path().join("out");
             let earlier = Folder::create(&path).unwrap();
             earlier.write("old", &content(b'a')).unwrap();
-            let gate = failing(k);
-            let outcome = Folder::create_gated(&path, gate.clone()).and_then(|folder| {
+            let outcome = Folder::create_gated(&path, failing(k)).and_then(|folder| {
                 folder.write("old", &content(b'b'))?;
                 folder.write_with("new", |out| {
                     content(b'c').chunks(WRITE_BYTES / 3).try_for_each(|part| out.write_all(part))
@@ -293,8 +298,21 @@ mod tests {
             assert!(matches!(error, FileError::Io { .. }));
             failures += 1;
         }
-        // The folder; create, one large write, sync, rename, sync; the same with three writes.
-        assert!(failures >= 1 + 5 + 7, "{failures} steps passed the gate");
+        // Create, one large write, sync, rename, sync; the same with three writes.
+        assert!(failures >= 5 + 7, "{failures} steps passed the gate");
+    }
+
+    #[test]
+    fn a_new_folder_and_those_above_it_are_created_or_refused() {
+        let home = tempfile::tempdir().unwrap();
+        let path = home.path().join("a/b");
+        for at in 0..2 {
+            assert!(Folder::create_gated(&path, failing(at)).is_err(), "step {at}");
+            let _ = fs::remove_dir_all(home.path().join("a"));
+        }
+        Folder::create(&path).unwrap().write("c", b"1").unwrap();
+        Folder::create(&path).unwrap().write("c", b"2").unwrap();
+        assert_eq!(fs::read(path.join("c")).unwrap(), b"2");
     }
 
     #[test]

@@ -84,3 +84,27 @@ pub struct Facts {
     /// NaN and infinite values; 0 unless they were allowed.
     pub nonfinite: u64,
 }
+
+/// Reads a whole text file of at most `bytes_max` bytes, such as a job file or a record.
+///
+/// # Errors
+/// The file cannot be read, is empty, is longer, or is not UTF-8.
+pub fn read_text(path: &Path, bytes_max: u64) -> Result<String, FileError> {
+    let source = source::Source::open(path)?;
+    if source.len() > bytes_max {
+        return Err(source.bad(Complaint::new(
+            format!("the file is {} bytes long, more than {bytes_max}", source.len()),
+            "check that this is the right file",
+        )));
+    }
+    let bytes = source.bytes();
+    let text = std::str::from_utf8(bytes).map_err(|error| {
+        let before = &bytes[..error.valid_up_to()];
+        let line = 1 + before.iter().filter(|&&b| b == b'\n').count() as u64;
+        let start = before.iter().rposition(|&b| b == b'\n').map_or(0, |place| place + 1);
+        let rest = bytes[start..].split(|&b| b == b'\n').next().unwrap_or_default();
+        let complaint = Complaint::new("the text is not UTF-8", "save the file as UTF-8");
+        source.bad(complaint.at_line(line).quoting(rest))
+    })?;
+    Ok(text.strip_prefix('\u{feff}').unwrap_or(text).to_string())
+}

@@ -13,7 +13,8 @@ use super::matrix::{ReadOptions, Settling, repeated_warning};
 use super::source::Source;
 use super::{Facts, FileError, Loaded};
 use crate::base::Complaint;
-use crate::operator::build::{Feeder, Keep, RowCounts, RunCounter};
+use crate::operator::build::{Feeder, RowCounts, RunCounter};
+use crate::operator::keep::Keep;
 use crate::operator::settle::Settled;
 use crate::operator::{Precision, StoredRows};
 
@@ -110,6 +111,13 @@ impl<'a> Sparse<'a> {
         let (rows, columns) = (shape[0], shape[1]);
         justify_shape(rows, columns)?;
         justify_rows(rows, file_bytes.saturating_mul(ROWS_PER_BYTE))?;
+        if !matches!(format.as_str(), "csr" | "csc" | "coo") {
+            return Err(Complaint::new(
+                "the sparse format is not csr, csc or coo",
+                "convert it before saving: scipy.sparse.save_npz(file, matrix.tocsr())",
+            )
+            .quoting(format));
+        }
         let entries = Member::open(archive, "data.npy")?.extent()?;
         let layout = match format.as_str() {
             "csr" => Layout::Rows(pointers(archive, rows, entries)?),
@@ -117,14 +125,7 @@ impl<'a> Sparse<'a> {
                 justify_rows(columns, file_bytes.saturating_mul(ROWS_PER_BYTE))?;
                 Layout::Columns(pointers(archive, columns, entries)?)
             }
-            "coo" => Layout::Pairs,
-            _ => {
-                return Err(Complaint::new(
-                    "the sparse format is not csr, csc or coo",
-                    "convert it before saving: scipy.sparse.save_npz(file, matrix.tocsr())",
-                )
-                .quoting(format));
-            }
+            _ => Layout::Pairs,
         };
         let (rows, columns) = (rows as usize, columns as usize);
         Ok(Self { archive: archive.clone(), layout, rows, columns, entries })

@@ -87,9 +87,8 @@ impl Table {
         if kind != Kind::Other || source.bytes().contains(&0) {
             return Err(source.unreadable(kind, "a table as comma-separated text"));
         }
-        let bytes = source.bytes();
-        let bytes = bytes.strip_prefix(b"\xef\xbb\xbf").unwrap_or(bytes);
-        let parsed = parse(bytes, lines, of).map_err(|fault| source.bad(fault))?;
+        let parsed =
+            parse(unmarked(source.bytes()), lines, of).map_err(|fault| source.bad(fault))?;
         let (heading_line, columns, records) = parsed;
         Ok(Self { source, heading_line, columns, records })
     }
@@ -98,9 +97,17 @@ impl Table {
         self.source.bad(complaint)
     }
 
-    fn cells<'a>(&'a self, column: &Column) -> impl Iterator<Item = (u64, &'a [u8])> + use<'a> {
+    /// The column's cells, each with its record.
+    fn cells<'a>(
+        &'a self,
+        column: &Column,
+    ) -> impl Iterator<Item = (&'a ByteRecord, &'a [u8])> + use<'a> {
         let place = column.place;
-        self.records.iter().map(move |record| (line_of(record), record[place].trim_ascii()))
+        self.records.iter().map(move |record| (record, record[place].trim_ascii()))
+    }
+
+    fn line_of(&self, record: &ByteRecord) -> u64 {
+        line_of(unmarked(self.source.bytes()), record)
     }
 
     /// Reads every cell; a fault gets its line.
@@ -110,8 +117,9 @@ impl Table {
         read: impl Fn(&[u8]) -> Result<T, Complaint>,
     ) -> Result<Vec<T>, FileError> {
         self.cells(column)
-            .map(|(line, cell)| {
-                read(cell).map_err(|fault| self.bad(fault.at_line(line).quoting(cell)))
+            .map(|(record, cell)| {
+                read(cell)
+                    .map_err(|fault| self.bad(fault.at_line(self.line_of(record)).quoting(cell)))
             })
             .collect()
     }
@@ -122,15 +130,16 @@ impl Table {
 
     /// Texts that are not empty and do not repeat.
     fn names(&self, column: &Column) -> Result<Vec<String>, FileError> {
-        let mut lines = HashMap::new();
+        let mut records = HashMap::new();
         let heading = &column.heading;
-        for (line, cell) in self.cells(column) {
+        for (record, cell) in self.cells(column) {
             let fault = if cell.is_empty() {
                 Complaint::new(
                     format!("the {heading} is empty"),
                     format!("give each line its {heading}"),
                 )
-            } else if let Some(earlier) = lines.insert(cell, line) {
+            } else if let Some(earlier) = records.insert(cell, record) {
+                let (earlier, line) = (self.line_of(earlier), self.line_of(record));
                 Complaint::new(
                     format!("the {heading} stands on lines {earlier} and {line}"),
                     format!("give each line its own {heading}"),
@@ -138,7 +147,7 @@ impl Table {
             } else {
                 continue;
             };
-            return Err(self.bad(fault.at_line(line).quoting(cell)));
+            return Err(self.bad(fault.at_line(self.line_of(record)).quoting(cell)));
         }
         Ok(self.texts(column))
     }
@@ -160,8 +169,17 @@ impl Table {
     }
 }
 
-fn line_of(record: &ByteRecord) -> u64 {
-    record.position().map_or(0, csv::Position::line)
+/// The text without its byte order mark.
+fn unmarked(bytes: &[u8]) -> &[u8] {
+    bytes.strip_prefix(b"\xef\xbb\xbf").unwrap_or(bytes)
+}
+
+/// The line on which a record begins. The reader's own count is that of the blank lines before it,
+/// and counting from the start is cheap enough for a message.
+fn line_of(text: &[u8], record: &ByteRecord) -> u64 {
+    let start = record.position().map_or(0, |position| position.byte() as usize);
+    let blanks = text[start..].iter().take_while(|b| matches!(b, b'\r' | b'\n')).count();
+    1 + text[..start + blanks].iter().filter(|&&b| b == b'\n').count() as u64
 }
 
 type Parsed = (u64, Vec<Column>, Vec<ByteRecord>);
@@ -179,7 +197,7 @@ fn parse(bytes: &[u8], lines: usize, of: &str) -> Result<Parsed, Complaint> {
         let cells = || record.iter().map(String::from_utf8_lossy).collect::<Vec<_>>().join(",");
         if record.iter().any(|cell| std::str::from_utf8(cell).is_err()) {
             return Err(Complaint::new("the text is not UTF-8", "save the table as UTF-8")
-                .at_line(line_of(&record))
+                .at_line(line_of(bytes, &record))
                 .quoting(cells()));
         }
         Ok(record)
@@ -187,7 +205,7 @@ fn parse(bytes: &[u8], lines: usize, of: &str) -> Result<Parsed, Complaint> {
     let Some(heading) = records.next().transpose()? else {
         return Err(Complaint::new("the table is empty", "give a heading and one line for each"));
     };
-    let columns = headings(&heading)?;
+    let columns = headings(&heading, line_of(bytes, &heading))?;
     let records: Vec<ByteRecord> = records.collect::<Result<_, _>>()?;
     check_cells(bytes, &heading, &records)?;
     if records.len() != lines {
@@ -198,13 +216,12 @@ fn parse(bytes: &[u8], lines: usize, of: &str) -> Result<Parsed, Complaint> {
             ),
             format!("give one line for each of the {of} of the matrix, in their order"),
         )
-        .at_line(records.last().map_or(line_of(&heading), line_of)));
+        .at_line(records.last().map_or(1, |last| line_of(bytes, last))));
     }
-    Ok((line_of(&heading), columns, records))
+    Ok((line_of(bytes, &heading), columns, records))
 }
 
-fn headings(heading: &ByteRecord) -> Result<Vec<Column>, Complaint> {
-    let line = line_of(heading);
+fn headings(heading: &ByteRecord, line: u64) -> Result<Vec<Column>, Complaint> {
     let mut columns: Vec<Column> = Vec::new();
     for (place, cell) in heading.iter().enumerate() {
         let heading = String::from_utf8_lossy(cell.trim_ascii()).into_owned();
@@ -236,7 +253,7 @@ fn check_cells(
             "a quote that is opened here is never closed",
             "close it, or double a quote that belongs to the text",
         )
-        .at_line(line_of(last)));
+        .at_line(line_of(bytes, last)));
     }
     match records.iter().find(|record| record.len() != heading.len()) {
         None => Ok(()),
@@ -248,7 +265,7 @@ fn check_cells(
             ),
             "give every line as many cells; put text that holds a comma in double quotes",
         )
-        .at_line(line_of(record))
+        .at_line(line_of(bytes, record))
         .quoting(record.iter().collect::<Vec<_>>().join(&b","[..]))),
     }
 }

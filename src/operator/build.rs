@@ -13,63 +13,14 @@ use std::sync::Arc;
 use std::sync::atomic::{AtomicUsize, Ordering};
 
 use rayon::prelude::*;
-use sprs::CsMatI;
 
-use super::rows::StoredRows;
+use super::keep::Keep;
 use super::settle::Unsettled;
 use crate::kernel::Value;
 
 /// Ranges of rows that are filled in parallel. More than any machine has use for; the result does
 /// not depend on it.
 const RANGES: usize = 64;
-
-/// A value that the matrix can keep.
-pub trait Keep: Value + Default + PartialEq + Send + Sync {
-    /// The next storage that holds more.
-    type Wider: Keep;
-
-    /// The number as stored, rounded where it must be.
-    fn keep(number: f64) -> Self;
-
-    /// The number as stored, if the storage holds it exactly (a NaN counts as exact).
-    fn keep_exactly(number: f64) -> Option<Self> {
-        let kept = Self::keep(number);
-        (kept.number() == number || number.is_nan()).then_some(kept)
-    }
-
-    fn store(matrix: CsMatI<Self, u32, usize>) -> StoredRows;
-}
-
-impl Keep for f64 {
-    type Wider = f64;
-    fn keep(number: f64) -> Self {
-        number
-    }
-    fn store(matrix: CsMatI<Self, u32, usize>) -> StoredRows {
-        StoredRows::Double(matrix)
-    }
-}
-
-impl Keep for f32 {
-    type Wider = f64;
-    fn keep(number: f64) -> Self {
-        number as f32
-    }
-    fn store(matrix: CsMatI<Self, u32, usize>) -> StoredRows {
-        StoredRows::Single(matrix)
-    }
-}
-
-impl Keep for () {
-    type Wider = f32;
-    fn keep(_: f64) -> Self {}
-    fn keep_exactly(number: f64) -> Option<Self> {
-        (number == 1.0).then_some(())
-    }
-    fn store(matrix: CsMatI<Self, u32, usize>) -> StoredRows {
-        StoredRows::Pattern(matrix)
-    }
-}
 
 /// Entries per row, counted by any number of threads at once.
 pub struct RowCounts {
@@ -335,6 +286,7 @@ fn cut_rows(starts: &[usize], total: usize) -> Vec<(usize, usize)> {
 
 #[cfg(test)]
 mod tests {
+    use super::super::rows::StoredRows;
     use super::super::settle::{Duplicates, Rules};
     use super::*;
     use crate::base::random::Stream;

@@ -4,6 +4,7 @@
 //! contiguous. A lane is one least-squares problem on the same matrix.
 
 pub mod build;
+pub mod keep;
 pub mod rows;
 pub mod settle;
 pub mod stack;

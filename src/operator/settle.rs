@@ -6,8 +6,9 @@
 use rayon::prelude::*;
 use sprs::CsMatI;
 
-use super::build::Keep;
+use super::keep::Keep;
 use super::rows::StoredRows;
+use crate::kernel::Value;
 
 /// What several entries at the same row and column mean.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Default)]
@@ -27,9 +28,15 @@ pub struct Rules {
     pub duplicates: Duplicates,
     /// A sum may overflow.
     pub allow_nonfinite: bool,
-    /// Sums are rounded to the storage at hand; otherwise the storage is widened where a sum
-    /// needs it.
+    /// Sums are rounded to f32; otherwise the storage is widened where a sum needs it.
     pub rounded: bool,
+}
+
+impl Rules {
+    /// Whether sums in this storage are rounded to it.
+    fn rounds<V: Keep>(&self) -> bool {
+        self.rounded && V::BYTES == f32::BYTES
+    }
 }
 
 /// Compressed rows whose columns may be unsorted and may repeat.
@@ -97,7 +104,7 @@ impl<V: Keep> Unsettled<V> {
         if let Some(refused) = found.refused {
             return Err(refused);
         }
-        if found.repeats > 0 && !found.exact && !rules.rounded {
+        if found.repeats > 0 && !found.exact && !rules.rounds::<V>() {
             return self.widened().settle(rules);
         }
         if found.repeats > 0 {
@@ -283,7 +290,7 @@ impl Found {
         }
         let merged = value_of_run(values, rules.duplicates);
         self.exact &= V::keep_exactly(merged).is_some();
-        let kept = if rules.rounded { V::keep(merged).number() } else { merged };
+        let kept = if rules.rounds::<V>() { V::keep(merged).number() } else { merged };
         let all_finite = values.iter().all(|value| value.number().is_finite());
         if all_finite && !kept.is_finite() && !rules.allow_nonfinite {
             return Some(Refused::SumOverflows { row, column });
@@ -334,6 +341,8 @@ mod tests {
         let rounded = Rules { rounded: true, ..rules };
         let kept = one_row::<f32>(&[(3, 1.0), (3, f64::from(1e-10f32))], &rounded).unwrap();
         assert_eq!((kept.matrix.storage_name(), listed(&kept)[0].1), ("f32", 1.0));
+        let twice = one_row::<()>(&[(3, 1.0), (3, 1.0)], &rounded).unwrap();
+        assert_eq!((twice.matrix.storage_name(), listed(&twice)[0]), ("f32", (3, 2.0)));
     }
 
     #[test]

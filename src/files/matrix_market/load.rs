@@ -10,7 +10,8 @@ use super::header::{Field, Header, Layout};
 use super::pass::{Collector, Entries, checked_header};
 use super::walk::{Leniency, Tally};
 use crate::base::{Complaint, Warning};
-use crate::operator::build::{Buckets, Keep, RowCounts, RunCounter, Scatter};
+use crate::operator::build::{Buckets, RowCounts, RunCounter, Scatter};
+use crate::operator::keep::Keep;
 use crate::operator::settle::Settled;
 use crate::operator::{Duplicates, Precision, StoredRows};
 

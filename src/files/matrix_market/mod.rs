@@ -7,6 +7,8 @@ mod dense;
 mod header;
 mod load;
 mod pass;
+mod places;
+mod quick;
 mod walk;
 
 pub use dense::read_dense;

@@ -70,7 +70,9 @@ impl Entries<'_> {
             .zip(&firsts)
             .map(|(piece, &first)| {
                 let mut kept = shared.start();
-                let tally = walk.piece(piece, first, self.header.entries, |line, i, j, value| {
+                // An array's places are only defined up to its last value.
+                let limit = self.header.entries.saturating_sub(first);
+                let tally = walk.piece(piece, first, limit, |line, i, j, value| {
                     shared.take(&mut kept, line, i, j, value);
                 });
                 (tally, kept)

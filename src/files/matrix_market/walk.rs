@@ -5,9 +5,11 @@
 //! answer it is that of the slow way (tested at the end).
 
 use super::super::complain::{LINE_BYTES_MAX, check_single, nonfinite};
-use super::super::number::{Whole, quick_real, quick_whole, real, whole};
+use super::super::number::{Whole, real, whole};
 use super::super::source::first_line;
 use super::header::{Field, Header, Layout, Symmetry, too_long};
+use super::places::ArrayPlaces;
+use super::quick::{blanks, line_end, quick_count, quick_entry, quick_one, quick_value};
 use crate::base::Complaint;
 use crate::base::complaint::quote;
 
@@ -41,7 +43,7 @@ pub struct Walk<'a> {
 }
 
 /// One entry as the file states it; row and column from 1.
-type Entry = (u64, u64, f64);
+pub type Entry = (u64, u64, f64);
 
 impl Walk<'_> {
     /// Calls `sink(line, row, column, value)` for each matrix entry of the piece, mirrored ones
@@ -337,119 +339,14 @@ fn check_integer(word: &[u8], field: Field) -> Result<(), Complaint> {
     }
 }
 
-// The quick way: each function gives up with `None` at anything unusual.
-
-#[inline(always)]
-fn blanks(bytes: &[u8], mut at: usize) -> usize {
-    while matches!(bytes.get(at), Some(b' ' | b'\t')) {
-        at += 1;
-    }
-    at
-}
-
-/// Length of the line if nothing but blanks follows `at`.
-#[inline(always)]
-fn line_end(bytes: &[u8], at: usize) -> Option<usize> {
-    let mut at = blanks(bytes, at);
-    at += usize::from(bytes.get(at) == Some(&b'\r'));
-    match bytes.get(at) {
-        None => Some(at),
-        Some(b'\n') => Some(at + 1),
-        Some(_) => None,
-    }
-}
-
-#[inline(always)]
-fn quick_entry(
-    quick: impl Fn(&[u8]) -> Option<(f64, usize)>,
-) -> impl Fn(&[u8]) -> Option<(Entry, usize)> {
-    move |bytes| {
-        let mut at = blanks(bytes, 0);
-        let (row, length) = quick_whole(&bytes[at..])?;
-        let gap = at + length;
-        at = blanks(bytes, gap);
-        let (column, length) = if at > gap { quick_whole(&bytes[at..])? } else { return None };
-        let gap = at + length;
-        at = blanks(bytes, gap);
-        let (value, length) = quick(&bytes[at..])?;
-        if length > 0 && at == gap {
-            return None;
-        }
-        Some(((row, column, value), line_end(bytes, at + length)?))
-    }
-}
-
-#[inline(always)]
-fn quick_one(_: &[u8]) -> Option<(f64, usize)> {
-    Some((1.0, 0))
-}
-
-#[inline(always)]
-fn quick_value(bytes: &[u8]) -> Option<(f64, usize)> {
-    quick_real(bytes)
-}
-
-/// A whole number small enough for f64 to hold exactly.
-#[inline(always)]
-fn quick_count(bytes: &[u8]) -> Option<(f64, usize)> {
-    let (value, length) = quick_whole(bytes)?;
-    (value < 1 << 53).then_some((value as f64, length))
-}
-
-/// Row and column, from 1, of the values of an array, column by column.
-struct ArrayPlaces {
-    rows: u64,
-    symmetry: Symmetry,
-    row: u64,
-    column: u64,
-}
-
-impl ArrayPlaces {
-    /// Stands before value number `first`.
-    fn from(header: &Header, first: u64) -> Self {
-        let (rows, symmetry) = (header.rows as u64, header.symmetry);
-        if symmetry == Symmetry::General {
-            return Self { rows, symmetry, row: first % rows + 1, column: first / rows + 1 };
-        }
-        let below = u64::from(symmetry == Symmetry::Skew);
-        // Values before column c (from 0) of the triangle; increasing up to c = rows.
-        let before = |c: u64| {
-            let (n, c) = (u128::from(rows - below), u128::from(c));
-            n * c - c * c.saturating_sub(1) / 2
-        };
-        let (mut low, mut high) = (0, rows);
-        while high - low > 1 {
-            let middle = low + (high - low) / 2;
-            if before(middle) <= u128::from(first) { low = middle } else { high = middle }
-        }
-        let row = low + below + (u128::from(first) - before(low)) as u64;
-        Self { rows, symmetry, row: row + 1, column: low + 1 }
-    }
-
-    #[inline(always)]
-    fn next(&mut self) -> (u64, u64) {
-        let here = (self.row, self.column);
-        self.row += 1;
-        if self.row > self.rows {
-            self.column += 1;
-            self.row = match self.symmetry {
-                Symmetry::General => 1,
-                Symmetry::Symmetric => self.column,
-                Symmetry::Skew => self.column + 1,
-            };
-        }
-        here
-    }
-}
-
 #[cfg(test)]
 mod tests {
     use super::*;
     use proptest::prelude::*;
 
-    fn header(field: Field, symmetry: Symmetry, layout: Layout) -> Header {
+    fn header(field: Field, symmetry: Symmetry) -> Header {
         Header {
-            layout,
+            layout: Layout::Coordinate,
             field,
             symmetry,
             rows: 30,
@@ -474,7 +371,7 @@ mod tests {
         fn quick_and_slow_agree(line in "[ \t]{0,2}[+-]?[0-9]{1,3}[ \t]{0,2}[0-9]{0,3}[ \t]{0,2}[-+0-9.eEdDinfa]{0,8}[ \t\r]{0,2}") {
             for field in [Field::Real, Field::Integer, Field::Unsigned, Field::Pattern] {
                 for symmetry in [Symmetry::General, Symmetry::Symmetric] {
-                    let header = header(field, symmetry, Layout::Coordinate);
+                    let header = header(field, symmetry);
                     let walk = Walk { header: &header, leniency: Leniency::default() };
                     let (list, tally) = entries(&walk, line.as_bytes(), 0);
                     match walk.entry_of(line.as_bytes(), &mut Tally::default()) {
@@ -487,36 +384,6 @@ mod tests {
                             prop_assert_eq!(tally.fault.unwrap().cause, fault.cause);
                         }
                     }
-                }
-            }
-        }
-    }
-
-    #[test]
-    fn places_of_an_array_are_the_same_wherever_a_piece_begins() {
-        for symmetry in [Symmetry::General, Symmetry::Symmetric, Symmetry::Skew] {
-            let mut header = header(Field::Real, symmetry, Layout::Array);
-            header.rows = 7;
-            header.columns = 7;
-            let count = match symmetry {
-                Symmetry::General => 49,
-                Symmetry::Symmetric => 28,
-                Symmetry::Skew => 21,
-            };
-            let mut wanted = Vec::new();
-            for column in 1..=7u64 {
-                let first = match symmetry {
-                    Symmetry::General => 1,
-                    Symmetry::Symmetric => column,
-                    Symmetry::Skew => column + 1,
-                };
-                (first..=7).for_each(|row| wanted.push((row, column)));
-            }
-            assert_eq!(wanted.len(), count);
-            for first in 0..count {
-                let mut places = ArrayPlaces::from(&header, first as u64);
-                for place in &wanted[first..] {
-                    assert_eq!(places.next(), *place);
                 }
             }
         }
