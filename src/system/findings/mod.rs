@@ -139,6 +139,20 @@ pub struct QuickFit {
     pub residual: Vec<f64>,
 }
 
+impl QuickFit {
+    /// Smallest and largest noise ([`Trial::noise`]) over the strengths whose GCV is within a
+    /// factor 2 of the least, the chosen one included; m = `data`.
+    ///
+    /// Panics if `chosen` is no place in `trials`.
+    pub fn noise_range(&self, data: usize) -> (f64, f64) {
+        let least = self.trials.iter().map(|t| t.gcv(data)).fold(f64::INFINITY, f64::min);
+        let good = self.trials.iter().filter(|t| t.gcv(data) <= 2.0 * least);
+        let noises = good.map(|t| t.noise(data)).filter(|noise| noise.is_finite());
+        let here = self.trials[self.chosen].noise(data);
+        noises.fold((here, here), |(low, high), noise| (low.min(noise), high.max(noise)))
+    }
+}
+
 /// One strength of a [`QuickFit`].
 #[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
 pub struct Trial {

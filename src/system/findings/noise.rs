@@ -29,7 +29,6 @@ use crate::system::{Facts, System};
 const AGREES: f64 = 3.0;
 const EXPLAINABLE: f64 = 2.0;
 const WIDENED: f64 = 1.5;
-const GCV_WITHIN: f64 = 2.0;
 const PREDICTED_MIN: f64 = 0.3;
 /// Without σ only data that are no better than noise are suspicious, and only if the row sums
 /// too say nothing about them.
@@ -86,7 +85,9 @@ pub(super) fn find(system: &System, facts: &Facts, fit: &QuickFit, known: Known)
         sizes.sort_unstable_by(f64::total_cmp);
         1.4826 * middle(&sizes) / spare
     };
-    let range = noise_range(fit, data);
+    let (low, high) = fit.noise_range(data);
+    let here = chosen.noise(data);
+    let range = Interval { low: low / here, high: high / here };
     let ratio_here = scale(|sigma| sigma);
     let ratio = range.times(ratio_here);
     let mut found = Vec::new();
@@ -94,7 +95,7 @@ pub(super) fn find(system: &System, facts: &Facts, fit: &QuickFit, known: Known)
         found.push(permuted(ratio.low, share));
     }
     // The error of prediction contains the noise: no noise is too small if that is not.
-    let prediction = ratio_here * chosen.gcv(data).sqrt() / chosen.noise(data);
+    let prediction = ratio_here * chosen.gcv(data).sqrt() / here;
     if ratio.low < AGREES && ratio.high.max(prediction) > 1.0 / AGREES {
         return found;
     }
@@ -112,18 +113,6 @@ pub(super) fn find(system: &System, facts: &Facts, fit: &QuickFit, known: Known)
         found.push(misfit(ratio.careful()));
     }
     found
-}
-
-/// Noise at the strengths that predict nearly as well as the best, over that at the chosen one.
-fn noise_range(fit: &QuickFit, data: usize) -> Interval {
-    let least = fit.trials.iter().map(|trial| trial.gcv(data)).fold(f64::INFINITY, f64::min);
-    let here = fit.trials[fit.chosen].noise(data);
-    let good = fit.trials.iter().filter(|trial| trial.gcv(data) <= GCV_WITHIN * least);
-    let ratios = good.map(|trial| trial.noise(data) / here).filter(|ratio| ratio.is_finite());
-    ratios.fold(Interval { low: 1.0, high: 1.0 }, |range, ratio| Interval {
-        low: range.low.min(ratio),
-        high: range.high.max(ratio),
-    })
 }
 
 fn predictive_share(system: &System, facts: &Facts, fit: &QuickFit) -> f64 {
