@@ -192,15 +192,9 @@ fn data_set(out: &mut String, inspection: &Inspection, place: usize, set: &SetSu
     match &set.constant {
         None => line(out, "one value", "every value fits equally well"),
         Some(fit) => {
-            let quantity = if units.model_quantity.is_empty() {
-                String::new()
-            } else {
-                format!(" {}", escape(&units.model_quantity))
-            };
-            line(out, "one value", &format!("{}{quantity}", with_unit(fit.value, &units.model)));
-            let inverse =
-                if units.model.is_empty() { String::new() } else { format!("1/({})", units.model) };
-            line(out, "its reciprocal", &with_unit(fit.reciprocal, &inverse));
+            let value = with_unit(fit.value, &units.model);
+            line(out, "one value", format!("{} {value}", escape(&units.model_quantity)).trim());
+            line(out, "its reciprocal", &with_unit(fit.reciprocal, &reciprocal(&units.model)));
             let share = format!("{} % of the weighted data's square", number(100.0 * fit.share));
             line(out, "it explains", &share);
         }
@@ -267,6 +261,17 @@ fn spread(out: &mut String, label: &str, spread: &Spread) {
 
 fn with_unit(value: f64, unit: &str) -> String {
     if unit.is_empty() { number(value) } else { format!("{} {}", number(value), escape(unit)) }
+}
+
+/// Unit of one over a quantity: `m/s` for `s/m`, `m` for `1/m`, `1/(…)` for all else.
+fn reciprocal(unit: &str) -> String {
+    match unit.split('/').collect::<Vec<_>>().as_slice() {
+        [""] => String::new(),
+        ["1", below] => (*below).to_string(),
+        [above, below] if !above.contains([' ', '·', '*', '(']) => format!("{below}/{above}"),
+        [plain] if !plain.contains([' ', '·', '*', '(']) => format!("1/{plain}"),
+        _ => format!("1/({unit})"),
+    }
 }
 
 /// Four digits, in powers of ten where that is shorter.

@@ -313,7 +313,8 @@ impl Recurrence for Cgls<'_> {
             lane.data_norm = lane.total_squared.sqrt();
             (lane.idle, lane.floor) = (0, false);
         }
-        (self.fresh.fill(1.0), self.factor.fill(0.0));
+        self.fresh.fill(1.0);
+        self.factor.fill(0.0);
         self.turn_direction();
     }
 
