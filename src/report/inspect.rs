@@ -5,7 +5,7 @@ use std::fmt::Write as _;
 use crate::base::complaint::escape;
 use crate::report::page::wrap;
 use crate::system::facts::Spread;
-use crate::system::findings::{Evidence, Finding, Severity};
+use crate::system::findings::{Evidence, Finding, Severity, number};
 use crate::system::inspection::{Extremes, FitSummary, Forecast, Inspection, Named, SetSummary};
 
 /// Width of the label before each value.
@@ -271,24 +271,6 @@ fn reciprocal(unit: &str) -> String {
         [above, below] if !above.contains([' ', '·', '*', '(']) => format!("{below}/{above}"),
         [plain] if !plain.contains([' ', '·', '*', '(']) => format!("1/{plain}"),
         _ => format!("1/({unit})"),
-    }
-}
-
-/// Four digits, in powers of ten where that is shorter.
-fn number(value: f64) -> String {
-    let size = value.abs();
-    if value == 0.0 {
-        return "0".into();
-    }
-    if !(1e-3..1e6).contains(&size) {
-        return format!("{value:.3e}");
-    }
-    let digits = (3 - size.log10().floor() as i32).max(0) as usize;
-    let text = format!("{value:.digits$}");
-    if text.contains('.') {
-        text.trim_end_matches('0').trim_end_matches('.').to_string()
-    } else {
-        text
     }
 }
 

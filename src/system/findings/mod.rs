@@ -216,6 +216,24 @@ pub fn findings(system: &System, facts: &Facts, fit: Option<&QuickFit>) -> Vec<F
     found
 }
 
+/// A number for a sentence: four digits, in powers of ten where that is shorter.
+pub fn number(value: f64) -> String {
+    let size = value.abs();
+    if value == 0.0 {
+        return "0".into();
+    }
+    if !(1e-3..1e6).contains(&size) {
+        return format!("{value:.3e}");
+    }
+    let digits = (3 - size.log10().floor() as i32).max(0) as usize;
+    let text = format!("{value:.digits$}");
+    if text.contains('.') {
+        text.trim_end_matches('0').trim_end_matches('.').to_string()
+    } else {
+        text
+    }
+}
+
 /// A x_ref of data set `set`; `None` without a reference. Rows are independent, so the bits do
 /// not depend on threads.
 fn predicted_by_reference(system: &System, set: usize) -> Option<Vec<f64>> {

@@ -20,8 +20,7 @@
 //!   says that there is something to explain (r > 2: two witnesses need not shout as loud as one)
 //!   and the share is below 0.3.
 
-use super::size::number;
-use super::{Finding, Kind, QuickFit, Severity, predicted_by_reference, weighted};
+use super::{Finding, Kind, QuickFit, Severity, number, predicted_by_reference, weighted};
 use crate::base::sums::dot;
 use crate::system::spread::middle;
 use crate::system::{Facts, System};

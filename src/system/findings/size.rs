@@ -17,7 +17,7 @@
 //!
 //! A sign or a factor between units is named only if it brings the value back into the range.
 
-use super::{Finding, Kind, QuickFit, Severity, predicted_by_reference, weighted};
+use super::{Finding, Kind, QuickFit, Severity, number, predicted_by_reference, weighted};
 use crate::base::sums::dot;
 use crate::system::{Facts, System};
 
@@ -240,21 +240,4 @@ fn example(slope: f64) -> String {
         .iter()
         .find(|(factor, _)| near(*factor))
         .map_or_else(String::new, |(_, word)| format!(" (e.g. {word})"))
-}
-
-/// Four digits, in powers of ten where that is shorter.
-pub(super) fn number(value: f64) -> String {
-    let size = value.abs();
-    if value == 0.0 || (1e-3..1e6).contains(&size) {
-        let digits =
-            if size == 0.0 { 0 } else { (3 - size.log10().floor() as i32).max(0) as usize };
-        let text = format!("{value:.digits$}");
-        if text.contains('.') {
-            text.trim_end_matches('0').trim_end_matches('.').to_string()
-        } else {
-            text
-        }
-    } else {
-        format!("{value:.3e}")
-    }
 }

@@ -221,7 +221,7 @@ fn noisy(stated: f64, residual: f64) -> (System, QuickFit) {
     let mut system = system(&rows, 10, data);
     system.uncertainty = Some(Array2::from_elem((100, 1), stated));
     system.weights = RowWeights::Shared(vec![1.0 / stated; 100]);
-    let sign = |i: usize| if i % 2 == 0 { residual } else { -residual };
+    let sign = |i: usize| if i.is_multiple_of(2) { residual } else { -residual };
     let trial = Trial {
         strength: 1.0,
         residual_norm: 10.0 * residual / stated,
