@@ -54,6 +54,7 @@ fn case(m: usize, n: usize, sets: usize, seed: u64) -> Case {
     }
 }
 
+#[allow(clippy::too_many_arguments)] // One test case written out on one line each.
 fn solve(
     case: &Case,
     scales: Option<&[f64]>,

@@ -4,12 +4,14 @@ pub mod conduct;
 pub mod demo;
 
 pub mod load;
+pub mod quick_fit;
 pub mod rerun;
 pub mod settings;
 pub mod typed;
 pub mod write;
 
 pub use conduct::{Finished, conduct};
+pub use quick_fit::quick_fit;
 pub use settings::{Command, Settings, Source};
 pub use typed::Typed;
 

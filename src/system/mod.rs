@@ -8,6 +8,7 @@ mod assemble;
 mod error;
 pub mod facts;
 pub mod findings;
+pub mod inspection;
 mod lengths;
 mod names;
 mod reference;
@@ -21,6 +22,7 @@ pub use error::SystemError;
 pub mod rays;
 pub use facts::Facts;
 pub use findings::{Finding, QuickFit, findings};
+pub use inspection::{Forecast, Inspection};
 
 use std::path::PathBuf;
 

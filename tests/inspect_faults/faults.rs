@@ -71,7 +71,7 @@ fn variance(mut world: World, _: u64) -> Option<World> {
 
 /// Percentages lose their factor 100; of other σ every second world's gains it.
 fn percent(mut world: World, seed: u64) -> Option<World> {
-    let factor = if seed % 2 == 0 { 100.0 } else { 0.01 };
+    let factor = if seed.is_multiple_of(2) { 100.0 } else { 0.01 };
     match &mut world.sigma {
         Sigma::Formula { percent, .. } if *percent > 0.0 => *percent /= 100.0,
         Sigma::Formula { absolute, .. } => *absolute *= factor,
@@ -95,8 +95,11 @@ fn dead(mut world: World, seed: u64) -> Option<World> {
         (None, "3-D emission") => (0..world.rows.len()).map(|i| (60..72).contains(&i)).collect(),
         _ => world.groups.iter().map(|&group| group == 3).collect(),
     };
-    let value =
-        if seed % 2 == 0 { 0.0 } else { world.data[is_dead.iter().position(|&dead| dead)?] };
+    let value = if seed.is_multiple_of(2) {
+        0.0
+    } else {
+        world.data[is_dead.iter().position(|&dead| dead)?]
+    };
     for (datum, dead) in world.data.iter_mut().zip(is_dead) {
         if dead {
             *datum = value;

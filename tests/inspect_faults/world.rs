@@ -3,6 +3,7 @@
 use ellbow::base::random::Stream;
 use ellbow::base::{Axis, Grid};
 use ellbow::operator::StoredRows;
+use ellbow::system::findings::Trial;
 use ellbow::system::*;
 use ndarray::{Array2, Axis as Along};
 
@@ -171,7 +172,7 @@ pub fn quick_fit(system: &System, facts: &Facts) -> QuickFit {
     let coefficients = eigen.eigenvectors.transpose() * &r;
     let top = squares.iter().copied().fold(0.0, f64::max).sqrt();
     let data = facts.sets[0].data as f64;
-    let mut best = (f64::INFINITY, 0.0, 0.0, 0.0);
+    let (mut trials, mut chosen, mut least) = (Vec::new(), 0, f64::INFINITY);
     for step in 0..40 {
         let strength = top * 10f64.powf(-5.0 * f64::from(step) / 39.0);
         let filter = |s: &f64| s / (s + strength * strength);
@@ -179,13 +180,14 @@ pub fn quick_fit(system: &System, facts: &Facts) -> QuickFit {
         let trace_square: f64 = squares.iter().map(|s| filter(s).powi(2)).sum();
         let rho: f64 =
             squares.iter().zip(&coefficients).map(|(s, c)| ((1.0 - filter(s)) * c).powi(2)).sum();
-        let gcv = data * rho / (data - trace).powi(2);
-        let robust = gcv * (0.1 + 0.9 * trace_square / data);
-        if robust < best.0 {
-            best = (robust, strength, trace, gcv);
+        let trial = Trial { strength, residual_norm: rho.sqrt(), effective_parameters: trace };
+        let robust = trial.gcv(facts.sets[0].data) * (0.1 + 0.9 * trace_square / data);
+        if robust < least {
+            (least, chosen) = (robust, trials.len());
         }
+        trials.push(trial);
     }
-    let (_, strength, trace, gcv) = best;
+    let strength = trials[chosen].strength;
     let scaled = nalgebra::DVector::from_iterator(
         m,
         squares.iter().zip(&coefficients).map(|(s, c)| c / (s + strength * strength)),
@@ -198,5 +200,5 @@ pub fn quick_fit(system: &System, facts: &Facts) -> QuickFit {
             system.data[[i, 0]] - entries.map(|(j, value)| value * model[j]).sum::<f64>()
         })
         .collect();
-    QuickFit { data_set: 0, strength, effective_parameters: trace, gcv, model, residual }
+    QuickFit { data_set: 0, trials, chosen, model, residual }
 }

@@ -8,8 +8,7 @@
 //! other units than the rest; more are a family of their own. A column that is too small needs
 //! eight hits, since one or two rays may just graze a cell.
 
-use super::size::number;
-use super::{Finding, Kind, Severity};
+use super::{Finding, Kind, Severity, number};
 use crate::system::spread::middle;
 use crate::system::{Facts, System};
 

@@ -124,20 +124,57 @@ impl Finding {
     }
 }
 
-/// A short solve at the strength that robust GCV chooses, for one data set: what the data look
-/// like once a reasonable model is taken out of them.
+/// A short run over strengths for one data set: what the data look like once a reasonable model is
+/// taken out of them.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct QuickFit {
     pub data_set: usize,
-    pub strength: f64,
-    /// tr H at that strength.
-    pub effective_parameters: f64,
-    /// m‖W(Ax−b)‖²/(m − tr H)² at that strength, m the data that count.
-    pub gcv: f64,
-    /// x, length n, model unit.
+    /// Strengths tried, in any order, over a few decades.
+    pub trials: Vec<Trial>,
+    /// Place in `trials` of the strength that robust GCV chooses.
+    pub chosen: usize,
+    /// x at the chosen strength, length n, model unit.
     pub model: Vec<f64>,
-    /// b − Ax, length m, data unit.
+    /// b − Ax at the chosen strength, length m, data unit.
     pub residual: Vec<f64>,
+}
+
+impl QuickFit {
+    /// Smallest and largest noise ([`Trial::noise`]) over the strengths whose GCV is within a
+    /// factor 2 of the least, the chosen one included; m = `data`.
+    ///
+    /// Panics if `chosen` is no place in `trials`.
+    pub fn noise_range(&self, data: usize) -> (f64, f64) {
+        let least = self.trials.iter().map(|t| t.gcv(data)).fold(f64::INFINITY, f64::min);
+        let good = self.trials.iter().filter(|t| t.gcv(data) <= 2.0 * least);
+        let noises = good.map(|t| t.noise(data)).filter(|noise| noise.is_finite());
+        let here = self.trials[self.chosen].noise(data);
+        noises.fold((here, here), |(low, high), noise| (low.min(noise), high.max(noise)))
+    }
+}
+
+/// One strength of a [`QuickFit`].
+#[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
+pub struct Trial {
+    pub strength: f64,
+    /// ‖W(Ax − b)‖.
+    pub residual_norm: f64,
+    /// tr H.
+    pub effective_parameters: f64,
+}
+
+impl Trial {
+    /// m‖W(Ax−b)‖²/(m − tr H)², m the data that count; infinite if nothing is left over.
+    pub fn gcv(&self, data: usize) -> f64 {
+        let spare = data as f64 - self.effective_parameters;
+        if spare > 0.0 { data as f64 * (self.residual_norm / spare).powi(2) } else { f64::INFINITY }
+    }
+
+    /// ‖W(Ax−b)‖/√(m − tr H): the noise in units of 1/w; infinite if nothing is left over.
+    pub fn noise(&self, data: usize) -> f64 {
+        let spare = data as f64 - self.effective_parameters;
+        if spare > 0.0 { self.residual_norm / spare.sqrt() } else { f64::INFINITY }
+    }
 }
 
 /// Everything that looks wrong or is worth knowing, gravest first, in a fixed order.
@@ -154,24 +191,47 @@ pub fn findings(system: &System, facts: &Facts, fit: Option<&QuickFit>) -> Vec<F
         assert_eq!(fit.model.len(), facts.columns, "a fit of this system");
         assert_eq!(fit.residual.len(), facts.rows, "a fit of this system");
         assert!(fit.data_set < facts.data_sets, "a fit of this system");
+        assert!(fit.chosen < fit.trials.len(), "a fit of this system");
     }
+    let repeats = repeats::find(system, facts);
+    let has = |kind| repeats.iter().any(|finding: &Finding| finding.kind == kind);
+    // Rows that are there twice predict each other, which fools every choice of strength.
+    let fit = fit.filter(|_| !has(Kind::DuplicatedRows));
+    let dead = has(Kind::DeadDetector);
+    let columns = columns::find(system, facts);
+    let size = size::find(system, facts, fit, !columns.is_empty());
     let mut found = Vec::new();
     found.extend(layout::find(system));
     found.extend(naming::find(system));
-    let size = size::find(system, facts, fit);
-    let size_is_known = size.is_settled();
-    found.extend(size.findings);
-    found.extend(columns::find(system, facts));
-    let repeats = repeats::find(system, facts);
-    let dead = repeats.iter().any(|finding| finding.kind == Kind::DeadDetector);
-    found.extend(repeats);
-    if let Some(fit) = fit {
-        let known = noise::Known { size: size_is_known, dead };
+    // Data of another size or sign misfit any σ: noise is judged once that is settled.
+    if let Some(fit) = fit.filter(|_| size.finding.is_none()) {
+        let known = noise::Known { size: size.tested, dead };
         found.extend(noise::find(system, facts, fit, known));
     }
+    found.extend(size.finding);
+    found.extend(columns);
+    found.extend(repeats);
     found.extend(coverage::find(system, facts));
     found.sort_by_key(|finding| finding.severity);
     found
+}
+
+/// A number for a sentence: four digits, in powers of ten where that is shorter.
+pub fn number(value: f64) -> String {
+    let size = value.abs();
+    if value == 0.0 {
+        return "0".into();
+    }
+    if !(1e-3..1e6).contains(&size) {
+        return format!("{value:.3e}");
+    }
+    let digits = (3 - size.log10().floor() as i32).max(0) as usize;
+    let text = format!("{value:.digits$}");
+    if text.contains('.') {
+        text.trim_end_matches('0').trim_end_matches('.').to_string()
+    } else {
+        text
+    }
 }
 
 /// A x_ref of data set `set`; `None` without a reference. Rows are independent, so the bits do

@@ -1,28 +1,33 @@
 //! Whether the residuals of a quick fit agree with the stated σ, and whether the data follow the
 //! matrix at all.
 //!
-//! The noise against σ is r = 1.4826 · median |eᵢ/σᵢ| / √(1 − tr H/m): robust, so that a few bad
-//! rows do not decide. For a right σ it is 1; modelling errors of the size of the noise give
-//! 1.4, and the trace of a short run is uncertain by a tenth or two, so r between 1/3 and 3 says
-//! nothing.
+//! The noise against σ at the chosen strength is r = 1.4826 · median |eᵢ/σᵢ| / √(1 − tr H/m):
+//! robust, so that a few bad rows do not decide. But the strength itself is uncertain, the more
+//! so the fewer data are to spare, and too weak or too strong a one mistakes noise for model or
+//! model for noise. So r is an interval: what it would be at every strength whose GCV is within a
+//! factor 2 of the least, i.e. that predicts as well up to 40 %. For a right σ it contains 1;
+//! modelling errors of the size of the noise move it by 1.4. An interval that meets 1/3 to 3 says
+//! nothing, and neither does one below 1/3 if the error of prediction √GCV, which contains the
+//! noise, is not below it too.
 //!
 //! - *Variance for σ.* If what is called σ is σ², then eᵢ/√(stated) has the scale 1: named if that
-//!   lies within a factor 2 of 1 and r does not.
-//! - *Percent for fraction.* r within a factor 2 of 100 or 1/100.
-//! - *Units.* r within a factor 2 of 1000, where nothing else told the size of the data.
+//!   scale's interval, widened by half for the uncertain traces, contains 1.
+//! - *Percent for fraction.* The interval, widened likewise, contains 100 or 1/100.
+//! - *Units.* It contains 1000, and nothing else told the size of the data.
 //! - *Permuted rows.* The predictive share is 1 − GCV/GCV₀, GCV₀ the least of the reference
 //!   model's, one constant's, and the mean datum's. Data in the order of the matrix that stand
 //!   above their noise can be predicted from the rest; data in another order cannot. Named if σ
-//!   says that there is something to explain (r > 3) and the share is below 0.3.
+//!   says that there is something to explain (r > 2: two witnesses need not shout as loud as one)
+//!   and the share is below 0.3.
 
-use super::size::number;
-use super::{Finding, Kind, QuickFit, Severity, predicted_by_reference, weighted};
+use super::{Finding, Kind, QuickFit, Severity, number, predicted_by_reference, weighted};
 use crate::base::sums::dot;
 use crate::system::spread::middle;
 use crate::system::{Facts, System};
 
 const AGREES: f64 = 3.0;
-const MATCHES: f64 = 2.0;
+const EXPLAINABLE: f64 = 2.0;
+const WIDENED: f64 = 1.5;
 const PREDICTED_MIN: f64 = 0.3;
 /// Without σ only data that are no better than noise are suspicious, and only if the row sums
 /// too say nothing about them.
@@ -38,9 +43,32 @@ pub(super) struct Known {
     pub dead: bool,
 }
 
+/// A factor known up to an interval.
+#[derive(Clone, Copy)]
+struct Interval {
+    low: f64,
+    high: f64,
+}
+
+impl Interval {
+    fn times(self, factor: f64) -> Self {
+        Self { low: self.low * factor, high: self.high * factor }
+    }
+
+    fn may_be(self, value: f64) -> bool {
+        value >= self.low / WIDENED && value <= self.high * WIDENED
+    }
+
+    /// The end nearer to 1, for a careful sentence.
+    fn careful(self) -> f64 {
+        if self.low > 1.0 { self.low } else { self.high }
+    }
+}
+
 pub(super) fn find(system: &System, facts: &Facts, fit: &QuickFit, known: Known) -> Vec<Finding> {
-    let m = facts.sets[fit.data_set].data as f64;
-    if m - fit.effective_parameters < SPARE_DATA_MIN || !fit.gcv.is_finite() {
+    let data = facts.sets[fit.data_set].data;
+    let chosen = &fit.trials[fit.chosen];
+    if data as f64 - chosen.effective_parameters < SPARE_DATA_MIN {
         return Vec::new();
     }
     let share = predictive_share(system, facts, fit);
@@ -48,35 +76,40 @@ pub(super) fn find(system: &System, facts: &Facts, fit: &QuickFit, known: Known)
         return unrelated(system, facts, fit, share).into_iter().collect();
     };
     let column = if sigma.ncols() == 1 { 0 } else { fit.data_set };
-    let spare = (1.0 - fit.effective_parameters / m).sqrt();
-    let scale = |deviation: &dyn Fn(f64) -> f64| {
+    let spare = (1.0 - chosen.effective_parameters / data as f64).sqrt();
+    let scale = |deviation: fn(f64) -> f64| {
         let rows = (0..facts.rows).filter(|&i| system.included(i, fit.data_set));
         let mut sizes: Vec<f64> =
             rows.map(|i| (fit.residual[i] / deviation(sigma[[i, column]])).abs()).collect();
         sizes.sort_unstable_by(f64::total_cmp);
         1.4826 * middle(&sizes) / spare
     };
-    let ratio = scale(&|sigma| sigma);
-    if ratio > 1.0 / AGREES && ratio < AGREES {
-        return Vec::new();
-    }
+    let (low, high) = fit.noise_range(data);
+    let here = chosen.noise(data);
+    let range = Interval { low: low / here, high: high / here };
+    let ratio_here = scale(|sigma| sigma);
+    let ratio = range.times(ratio_here);
     let mut found = Vec::new();
-    if ratio >= AGREES && share < PREDICTED_MIN && !known.dead {
-        found.push(permuted(ratio, share));
+    if ratio.low > EXPLAINABLE && share < PREDICTED_MIN && !known.dead {
+        found.push(permuted(ratio.low, share));
     }
-    let as_variance = scale(&f64::sqrt);
-    let near = |value: f64, target: f64| (value / target).ln().abs() <= MATCHES.ln();
-    if near(as_variance, 1.0) {
-        found.push(variance(ratio, as_variance));
+    // The error of prediction contains the noise: no noise is too small if that is not.
+    let prediction = ratio_here * chosen.gcv(data).sqrt() / here;
+    if ratio.low < AGREES && ratio.high.max(prediction) > 1.0 / AGREES {
+        return found;
     }
-    if near(ratio, 100.0) || near(ratio, 0.01) {
-        found.push(percent(ratio));
+    let as_variance = range.times(scale(f64::sqrt));
+    if as_variance.may_be(1.0) {
+        found.push(variance(ratio.careful(), as_variance.careful()));
     }
-    if near(ratio, 1000.0) && !known.size {
-        found.push(units(ratio));
+    if ratio.may_be(100.0) || ratio.may_be(0.01) {
+        found.push(percent(ratio.careful()));
+    }
+    if ratio.may_be(1000.0) && !known.size {
+        found.push(units(ratio.careful()));
     }
     if found.is_empty() {
-        found.push(misfit(ratio));
+        found.push(misfit(ratio.careful()));
     }
     found
 }
@@ -98,7 +131,7 @@ fn predictive_share(system: &System, facts: &Facts, fit: &QuickFit) -> f64 {
     let mean = dot(&w, &b) / dot(&w, &w);
     let left = weighted(system, set, |i| system.data[[i, set]] - mean);
     null = null.min(dot(&left, &left) * one_spent);
-    1.0 - fit.gcv / null
+    1.0 - fit.trials[fit.chosen].gcv(of_set.data) / null
 }
 
 fn permuted(ratio: f64, share: f64) -> Finding {

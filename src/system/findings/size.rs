@@ -6,16 +6,18 @@
 //!    their correlation exceeds 0.7 in size, i.e. the reference explains half of ‖Wb‖². A
 //!    negative one says the sign is wrong; a slope off by 30 or more (no reference worth the name
 //!    is) that the unit is.
-//! 2. *One constant.* Where no entry is negative, the constant that fits best is an average of
-//!    the true unknowns with weights that are not negative, whatever the model. So it lies within
-//!    the range of values called plausible, up to noise: five standard deviations, taken from the
-//!    misfit of the constant fit itself, which contains more than noise.
+//! 2. *One constant.* Where no entry is negative, the constant Σ sᵢbᵢ/Σ sᵢ² that fits best is an
+//!    average of the true unknowns with weights that are not negative, whatever the model. So it
+//!    lies within the range of values called plausible, up to noise: five standard deviations,
+//!    taken from the misfit of the constant fit itself, which contains more than noise. All data
+//!    count alike here, so that a wrong σ does not decide who is heard.
 //! 3. *A quick fit.* The share of the model's size that lies outside the plausible range. A
-//!    regularised model overshoots by a tenth or two of its size; 0.25 is beyond that.
+//!    regularised model overshoots by a tenth or two of its size; 0.25 is beyond that. A fit that
+//!    spends nearly as many parameters as there are data follows the noise and is not heard.
 //!
 //! A sign or a factor between units is named only if it brings the value back into the range.
 
-use super::{Finding, Kind, QuickFit, Severity, predicted_by_reference, weighted};
+use super::{Finding, Kind, QuickFit, Severity, number, predicted_by_reference, weighted};
 use crate::base::sums::dot;
 use crate::system::{Facts, System};
 
@@ -23,6 +25,8 @@ const CORRELATION_MIN: f64 = 0.7;
 const SLOPE_OFF_MIN: f64 = 30.0;
 const DEVIATIONS: f64 = 5.0;
 const OUTSIDE_MIN: f64 = 0.25;
+/// Effective parameters for each datum beyond which a model follows the noise.
+const PARAMETERS_MAX: f64 = 0.8;
 /// A hypothesis must remove three quarters of what lies outside.
 const OUTSIDE_LEFT_MAX: f64 = 0.25;
 /// Overshoot allowed beyond the range, as a part of its width, before a factor is suspected.
@@ -43,34 +47,35 @@ const FACTORS: [(f64, &str); 10] = [
 ];
 
 pub(super) struct Size {
-    pub findings: Vec<Finding>,
-    tested: bool,
-}
-
-impl Size {
+    pub finding: Option<Finding>,
     /// Whether there was anything to judge the size by.
-    pub fn is_settled(&self) -> bool {
-        self.tested
-    }
+    pub tested: bool,
 }
 
-pub(super) fn find(system: &System, facts: &Facts, fit: Option<&QuickFit>) -> Size {
-    let mut size = Size { findings: Vec::new(), tested: false };
+/// `odd_columns`: some columns are far out of scale, so that they rule the row sums and a constant
+/// means nothing.
+pub(super) fn find(
+    system: &System,
+    facts: &Facts,
+    fit: Option<&QuickFit>,
+    odd_columns: bool,
+) -> Size {
+    let mut tested = false;
     for set in 0..facts.data_sets {
+        let fit = fit.filter(|fit| fit.data_set == set);
         let witnesses = [
             against_reference(system, facts, set),
-            against_constant(system, facts, set),
-            fit.filter(|fit| fit.data_set == set).and_then(|fit| against_fit(system, fit)),
+            against_constant(system, facts, set).filter(|_| !odd_columns),
+            fit.and_then(|fit| against_fit(system, fit, facts.sets[set].data)),
         ];
         for verdict in witnesses.into_iter().flatten() {
-            size.tested = true;
+            tested = true;
             if let Verdict::Accused(finding) = verdict {
-                size.findings.push(*finding);
-                return size;
+                return Size { finding: Some(*finding), tested };
             }
         }
     }
-    size
+    Size { finding: None, tested }
 }
 
 /// What a witness that can speak has to say.
@@ -127,30 +132,37 @@ fn against_reference(system: &System, facts: &Facts, set: usize) -> Option<Verdi
 
 fn against_constant(system: &System, facts: &Facts, set: usize) -> Option<Verdict> {
     let (low, high) = system.units.plausible?;
-    let of_set = &facts.sets[set];
-    let constant = of_set.constant?;
     let one_sign = facts.row.sum.iter().zip(&facts.row.absolute_sum).all(|(s, a)| s == a);
-    if !one_sign || constant.share <= 0.0 {
+    let fixed = system.columns.fixed.as_ref();
+    if !one_sign || fixed.is_some_and(|values| values.iter().any(|value| !value.is_nan())) {
         return None;
     }
-    let spare = ((1.0 - constant.share).max(0.0) / constant.share / of_set.data as f64).sqrt();
-    let spare = DEVIATIONS * constant.value.abs() * spare;
+    let counts = |i: usize| f64::from(u8::from(system.included(i, set)));
+    let s: Vec<f64> = (0..facts.rows).map(|i| counts(i) * facts.row.sum[i]).collect();
+    let b: Vec<f64> = (0..facts.rows).map(|i| counts(i) * system.data[[i, set]]).collect();
+    let (ss, sb, bb) = (dot(&s, &s), dot(&s, &b), dot(&b, &b));
+    let (value, share) = (sb / ss, sb / ss * (sb / bb));
+    if !(share > 0.0 && value.is_finite()) {
+        return None;
+    }
+    let misfit = (1.0 - share).max(0.0) * bb;
+    let spare = DEVIATIONS * (misfit / facts.sets[set].data as f64 / ss).sqrt();
     let inside = |value: f64, spare: f64| value >= low - spare && value <= high + spare;
-    if inside(constant.value, spare) {
+    if inside(value, spare) {
         return Some(Verdict::Sound);
     }
     let unit = &system.units.model;
     let seen = format!(
-        "The one value that fits all data best is {} {unit}, outside the plausible {} to {} {unit}",
-        number(constant.value),
+        "The one value that fits all data alike is {} {unit}, outside the plausible {} to {} {unit}",
+        number(value),
         number(low),
         number(high)
     );
-    let finding = if inside(-constant.value, 0.0) {
+    let finding = if inside(-value, 0.0) {
         let sentence = format!("{seen}; with the opposite sign it would lie inside.");
         Finding::new(Kind::DataSign, Severity::Fault, sentence, SIGN_REMEDY)
     } else if let Some((factor, word)) =
-        FACTORS.iter().find(|(factor, _)| inside(constant.value / factor, spare / factor))
+        FACTORS.iter().find(|(factor, _)| inside(value / factor, spare / factor))
     {
         let sentence = format!(
             "{seen}; data divided by {} would bring it inside (e.g. {word}).",
@@ -163,13 +175,16 @@ fn against_constant(system: &System, facts: &Facts, set: usize) -> Option<Verdic
     };
     accuse(
         finding
-            .with_unit("one value for all unknowns", constant.value, unit)
-            .with("share of the data it explains", constant.share),
+            .with_unit("one value for all unknowns", value, unit)
+            .with("share of the data it explains", share),
     )
 }
 
-fn against_fit(system: &System, fit: &QuickFit) -> Option<Verdict> {
+fn against_fit(system: &System, fit: &QuickFit, data: usize) -> Option<Verdict> {
     let (low, high) = system.units.plausible?;
+    if fit.trials[fit.chosen].effective_parameters > PARAMETERS_MAX * data as f64 {
+        return None;
+    }
     let is_free = |j: usize| {
         let fixed = system.columns.fixed.as_ref();
         fixed.is_none_or(|values| values[j].is_nan()) && system.columns.is_cell(j)
@@ -225,21 +240,4 @@ fn example(slope: f64) -> String {
         .iter()
         .find(|(factor, _)| near(*factor))
         .map_or_else(String::new, |(_, word)| format!(" (e.g. {word})"))
-}
-
-/// Four digits, in powers of ten where that is shorter.
-pub(super) fn number(value: f64) -> String {
-    let size = value.abs();
-    if value == 0.0 || (1e-3..1e6).contains(&size) {
-        let digits =
-            if size == 0.0 { 0 } else { (3 - size.log10().floor() as i32).max(0) as usize };
-        let text = format!("{value:.digits$}");
-        if text.contains('.') {
-            text.trim_end_matches('0').trim_end_matches('.').to_string()
-        } else {
-            text
-        }
-    } else {
-        format!("{value:.3e}")
-    }
 }
