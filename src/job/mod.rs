@@ -2,7 +2,7 @@
 
 pub mod conduct;
 pub mod demo;
-
+pub mod forecast;
 pub mod load;
 pub mod quick_fit;
 pub mod rerun;
@@ -11,6 +11,7 @@ pub mod typed;
 pub mod write;
 
 pub use conduct::{Finished, conduct};
+pub use forecast::forecast;
 pub use quick_fit::quick_fit;
 pub use settings::{Command, Settings, Source};
 pub use typed::Typed;

@@ -16,7 +16,6 @@ use rayon::prelude::*;
 
 use super::keep::Keep;
 use super::settle::Unsettled;
-use crate::kernel::Value;
 
 /// Ranges of rows that are filled in parallel. More than any machine has use for; the result does
 /// not depend on it.

@@ -32,6 +32,9 @@ pub fn page(inspection: &Inspection) -> String {
     out
 }
 
+/// Places shown with what accuses nobody.
+const NOTE_PLACES: usize = 2;
+
 fn findings(out: &mut String, findings: &[Finding]) {
     if findings.is_empty() {
         let _ = writeln!(out, "Nothing looks wrong with this system.");
@@ -46,8 +49,10 @@ fn findings(out: &mut String, findings: &[Finding]) {
         for evidence in &finding.evidence {
             wrap(out, "         - ", &evidence_line(evidence));
         }
+        // What accuses names all it has; a note is only illustrated. The record holds the rest.
+        let shown = if finding.severity == Severity::Note { NOTE_PLACES } else { usize::MAX };
         if !finding.places.is_empty() {
-            wrap(out, "         at ", &finding.places.join("; "));
+            wrap(out, "         at ", &listed(&finding.places, shown));
         }
         wrap(out, "         Remedy: ", &finding.remedy);
     }
@@ -139,8 +144,20 @@ fn named(out: &mut String, label: &str, named: &Named) {
     if named.count == 0 {
         return;
     }
-    let more = if named.count > named.first.len() { "; …" } else { "" };
-    line(out, label, &format!("{}: {}{more}", count(named.count), named.first.join("; ")));
+    let names = listed(&named.first, NOTE_PLACES);
+    let more = if named.count > named.first.len().min(NOTE_PLACES) && !names.ends_with('…') {
+        "; …"
+    } else {
+        ""
+    };
+    line(out, label, &format!("{}: {names}{more}", count(named.count)));
+}
+
+/// The first few places, and a mark where there are more.
+fn listed(places: &[String], most: usize) -> String {
+    let shown = places.len().min(most);
+    let more = if shown < places.len() { "; …" } else { "" };
+    format!("{}{more}", places[..shown].join("; "))
 }
 
 fn scaling(out: &mut String, inspection: &Inspection) {
@@ -238,8 +255,9 @@ fn extremes(out: &mut String, title: &str, extremes: &Extremes) {
 }
 
 fn forecast(out: &mut String, forecast: &Forecast) {
-    heading(out, "Forecast of a solve");
-    line(out, "memory at the peak", &bytes(forecast.peak_bytes));
+    heading(out, "Forecast");
+    line(out, "memory of a solve", &format!("{} at the peak", bytes(forecast.peak_bytes)));
+    line(out, "memory of a sweep", &format!("{} at the peak", bytes(forecast.sweep_peak_bytes)));
     let seconds = format!("{} s", number(forecast.seconds_per_iteration));
     line(out, "one iteration", &seconds);
     line(out, "memory traffic", &format!("{} a pass", bytes(forecast.bytes_per_pass)));

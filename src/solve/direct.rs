@@ -26,6 +26,9 @@ pub struct Dense {
 /// Multiplications that the decomposition is allowed to cost when nobody asked for it.
 const CHEAP: f64 = 1e8;
 
+/// Numbers in the dense array of such a decomposition: 8 MB, and as much again twice for its factors.
+const CHEAP_NUMBERS: usize = 1_000_000;
+
 /// Numbers in the dense array that `--method direct` accepts: 160 MB.
 pub const DENSE_NUMBERS_MAX: usize = 20_000_000;
 
@@ -39,7 +42,7 @@ pub fn work(rows: usize, columns: usize) -> f64 {
 
 /// Whether the decomposition is cheap enough to be made unasked, for an exact trace or condition.
 pub fn cheap(rows: usize, columns: usize) -> bool {
-    work(rows, columns) <= CHEAP
+    work(rows, columns) <= CHEAP && rows * columns <= CHEAP_NUMBERS
 }
 
 /// Whether `--method direct` takes a system of this size.

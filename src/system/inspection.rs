@@ -135,7 +135,10 @@ pub struct FitSummary {
 
 #[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
 pub struct Forecast {
+    /// Of a solve at one strength.
     pub peak_bytes: u64,
+    /// Of a sweep over the default number of strengths.
+    pub sweep_peak_bytes: u64,
     pub seconds_per_iteration: f64,
     pub bytes_per_pass: u64,
     pub bandwidth_bytes_per_second: f64,

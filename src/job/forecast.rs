@@ -1,0 +1,153 @@
+//! What a run will cost, before anyone pays for it: memory from sizes, time from a short probe.
+
+use std::time::Instant;
+
+use sprs::CsMatI;
+
+use crate::base::memory;
+use crate::operator::{Operator, RowWeights, StoredRows, Weighted};
+use crate::solve::certificate::{self, Frobenius};
+use crate::solve::fan::{Fan, Rotations};
+use crate::solve::lsqr::Lsqr;
+use crate::solve::pieces::TrackVectors;
+use crate::solve::{Lane, Problem, Recurrence};
+use crate::sweep::{LANES_MAX, range};
+use crate::system::System;
+use crate::system::inspection::Forecast;
+
+/// The probe stops after this long, once it has made a few steps.
+const PROBE_SECONDS: f64 = 0.4;
+
+/// Steps that a probe makes at least, and at most.
+const STEPS: (usize, usize) = (3, 400);
+
+/// A larger matrix is probed on a sample of its rows with about this many entries.
+const SAMPLE_ENTRIES: usize = 20_000_000;
+
+/// Rows that stay together in a sample, so that neighbours still share the cache.
+const SAMPLE_ROWS: usize = 256;
+
+/// Strengths of a sweep when none are given.
+const SWEEP_STRENGTHS: usize = 51;
+
+/// Forecasts a solve and a default sweep with LSQR on the calling thread pool. To be called after the system is loaded and its facts
+/// are known, and before anything else takes memory: what is resident now is where a run starts.
+pub fn forecast(system: &System) -> Forecast {
+    let resident = memory::resident_bytes().unwrap_or(0);
+    let already = memory::peak_bytes().unwrap_or(0);
+    let sets = system.sets().min(LANES_MAX);
+    let bare = Weighted::new(&system.matrix, &system.weights, None);
+    let bytes_per_pass = bare.bytes_per_pass(sets);
+    let seconds = seconds_per_step(system, sets);
+    let peak = |strengths: usize| already.max(resident + run_bytes(&bare, system, strengths));
+    Forecast {
+        peak_bytes: peak(1),
+        sweep_peak_bytes: peak(SWEEP_STRENGTHS),
+        seconds_per_iteration: seconds,
+        bytes_per_pass,
+        bandwidth_bytes_per_second: bytes_per_pass as f64 / seconds,
+    }
+}
+
+/// Bytes that a run of LSQR takes on top of the loaded system, at its peak.
+fn run_bytes(matrix: &Weighted<'_>, system: &System, strengths: usize) -> u64 {
+    let (m, n) = (matrix.rows(), matrix.columns());
+    let lanes = system.sets().min(LANES_MAX);
+    let tracks = lanes * strengths;
+    let all_tracks = system.sets() * strengths;
+    let number = |count: usize| 8 * count as u64;
+    let models = number(n * all_tracks);
+    let residuals = number(m * all_tracks);
+    // u, v, s and the room of a pass; x and w of every track; the scouting vectors of a sweep.
+    let scouted = if strengths > 1 { number(n * lanes * (range::SCOUT_STEPS + 1)) } else { 0 };
+    let iterating = number((m + 2 * n) * lanes)
+        + matrix.scratch_bytes(lanes)
+        + TrackVectors::bytes(n, tracks, Lsqr::VECTORS);
+    let opening = iterating + scouted;
+    let reading = iterating + number(n * tracks);
+    // Blocks of one pass of certificates, beside the models and residuals of all.
+    let width = tracks.min(certificate::WIDTH_MAX);
+    let certifying = models + residuals + number((m + 2 * n) * width) + matrix.scratch_bytes(width);
+    // Models and their flat copy for models.npy.
+    let writing = if strengths > 1 { 2 * models + residuals } else { models + residuals };
+    opening.max(reading).max(certifying).max(writing)
+}
+
+/// Median seconds of a step of the process with all data sets as lanes.
+fn seconds_per_step(system: &System, sets: usize) -> f64 {
+    let entries = system.matrix.entries();
+    if entries <= 2 * SAMPLE_ENTRIES {
+        return probe(&system.matrix, &system.weights, system, sets);
+    }
+    let (sample, weights) = sample(system);
+    // Time goes with entries; the sample has the same columns, so what goes with n is counted
+    // more than it weighs in the whole, which errs on the slow side.
+    let share = entries as f64 / sample.entries() as f64;
+    probe(&sample, &weights, system, sets) * share
+}
+
+fn probe(matrix: &StoredRows, weights: &RowWeights, system: &System, sets: usize) -> f64 {
+    let operator = Weighted::new(matrix, weights, None);
+    // Data of ones would end the process early on some systems; the matrix decides the time.
+    let data = ndarray::Array2::from_shape_fn((matrix.rows(), system.sets()), |(i, set)| {
+        let stream = crate::base::random::Stream::new(1, set as u64);
+        stream.sign(i as u64)
+    });
+    let problem = Problem {
+        matrix: &operator,
+        penalty: None,
+        stacked: false,
+        data: data.view(),
+        reference: None,
+        start: None,
+        lanes: (0..sets).map(|set| Lane { set, strengths: vec![0.0] }).collect(),
+    };
+    // Only the level at which the process counts as ended depends on these norms.
+    let frobenius = Frobenius::new(vec![vec![0.0; matrix.columns()]], system.sets());
+    let norms: Vec<f64> = (0..sets).map(|set| frobenius.in_model(&problem, set, 0.0)).collect();
+    let mut fan = Fan::<Lsqr>::new(&problem, &norms, STEPS.1, None);
+    fan.start();
+    let begun = Instant::now();
+    let mut seconds = Vec::with_capacity(STEPS.1);
+    while seconds.len() < STEPS.1
+        && (seconds.len() < STEPS.0 || begun.elapsed().as_secs_f64() < PROBE_SECONDS)
+    {
+        let step = Instant::now();
+        fan.step();
+        seconds.push(step.elapsed().as_secs_f64());
+    }
+    seconds.sort_by(f64::total_cmp);
+    seconds[seconds.len() / 2]
+}
+
+/// Every few blocks of rows, about [`SAMPLE_ENTRIES`] entries in all, with their weights.
+fn sample(system: &System) -> (StoredRows, RowWeights) {
+    let matrix = &system.matrix;
+    let stride = matrix.entries().div_ceil(SAMPLE_ENTRIES);
+    let rows: Vec<usize> = (0..matrix.rows()).filter(|i| i / SAMPLE_ROWS % stride == 0).collect();
+    let stored = match matrix {
+        StoredRows::Double(a) => StoredRows::Double(pick(a, &rows)),
+        StoredRows::Single(a) => StoredRows::Single(pick(a, &rows)),
+        StoredRows::Pattern(a) => StoredRows::Pattern(pick(a, &rows)),
+    };
+    let weights = match &system.weights {
+        RowWeights::Ones => RowWeights::Ones,
+        RowWeights::Shared(w) => RowWeights::Shared(rows.iter().map(|&i| w[i]).collect()),
+        RowWeights::PerSet(w) => RowWeights::PerSet(w.select(ndarray::Axis(0), &rows)),
+    };
+    (stored, weights)
+}
+
+fn pick<V: Copy>(a: &CsMatI<V, u32, usize>, rows: &[usize]) -> CsMatI<V, u32, usize> {
+    let pointers = a.indptr();
+    let pointers = pointers.raw_storage();
+    let mut starts = vec![0];
+    let (mut indices, mut values) = (Vec::new(), Vec::new());
+    for &i in rows {
+        let entries = pointers[i]..pointers[i + 1];
+        indices.extend_from_slice(&a.indices()[entries.clone()]);
+        values.extend_from_slice(&a.data()[entries]);
+        starts.push(indices.len());
+    }
+    CsMatI::new((rows.len(), a.cols()), starts, indices, values)
+}
