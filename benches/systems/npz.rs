@@ -6,8 +6,8 @@ use std::io::{BufWriter, Write};
 use std::path::Path;
 
 use ellbow::each_storage;
+use ellbow::kernel::Value;
 use ellbow::operator::StoredRows;
-use ellbow::operator::rows::Value;
 use zip::write::SimpleFileOptions;
 use zip::{CompressionMethod, ZipWriter};
 
