@@ -98,6 +98,7 @@ pub trait Recurrence {
     /// The lane's Golub–Kahan scalars; `None` for methods without.
     fn process(&self, lane: usize) -> Option<&Process>;
 
-    /// Bytes of blocks, tracks and scratch.
+    /// Bytes of blocks, tracks, scratch and room for α and β; lists of a few numbers a lane or
+    /// track are left out.
     fn workspace_bytes(&self) -> u64;
 }
