@@ -14,6 +14,7 @@ pub mod engine;
 pub mod fan;
 pub mod golub_kahan;
 pub mod history;
+mod jacobi;
 pub mod lsmr;
 pub mod lsqr;
 pub mod pieces;
