@@ -202,10 +202,12 @@ impl<'a> Work<'a> {
 
     fn iterate(&self, request: &Request<'_>, watch: &dyn Watch, run: &mut Run<'_>) {
         let sweep = sweep::run(request, watch);
-        let unscaled = sweep.plan.scales.is_none();
-        run.condition = match &sweep.sets[0].process {
-            Some(process) if unscaled => Condition::of_process(process),
-            _ => None,
+        let process = sweep.sets[0].process.as_ref();
+        run.condition = if sweep.plan.scaled && sweep.strengths.contains(&0.0) {
+            let span = sweep::plan::span(&self.column_norms(request.held));
+            Some(Condition::of_evened(span, process, request.matrix.columns()))
+        } else {
+            process.filter(|_| sweep.plan.scales.is_none()).and_then(Condition::of_process)
         };
         run.strengths = sweep.strengths;
         run.sets = sweep.sets;
@@ -215,6 +217,12 @@ impl<'a> Work<'a> {
         run.column_scaling = sweep.plan.scaled;
         run.workspace_bytes = sweep.workspace_bytes;
         run.interrupted = sweep.interrupted.is_some();
+    }
+
+    /// ‖W aⱼ‖ of the free unknowns, by the weights of the first data set.
+    fn column_norms(&self, held: Option<&[bool]>) -> Vec<f64> {
+        let squares = self.facts.column.weighted_square_sums[0].iter().enumerate();
+        squares.filter(|(j, _)| !held.is_some_and(|h| h[*j])).map(|(_, s)| s.sqrt()).collect()
     }
 
     fn direct(&self, request: &Request<'_>, run: &mut Run<'_>) -> Result<(), JobError> {
@@ -254,7 +262,7 @@ impl<'a> Work<'a> {
         let mut decompositions = dense.decompositions;
         let first = decompositions.swap_remove(0);
         if request.penalty.is_none() && request.held.is_none() {
-            run.condition = Some(Condition { value: first.condition(), exact: true });
+            run.condition = Some(Condition::exact(first.condition()));
         }
         run.dense = Some(first);
         run.strengths = dense.strengths;
@@ -273,7 +281,7 @@ impl<'a> Work<'a> {
         }
         let bare = Weighted::new(&self.system.matrix, &self.system.weights, None);
         if let Some(dense) = Dense::new(&bare, 0) {
-            run.condition = Some(Condition { value: dense.condition(), exact: true });
+            run.condition = Some(Condition::exact(dense.condition()));
             let traces: Vec<f64> = run.strengths.iter().map(|&s| dense.trace(s)).collect();
             run.traces = Some(vec![traces; run.sets.len()]);
         }
@@ -327,12 +335,19 @@ impl<'a> Work<'a> {
 fn condition_warning(condition: Condition) -> Option<String> {
     let value = if condition.exact {
         format!("{:.2e}", condition.value)
+    } else if condition.possible > condition.value {
+        format!("at least {:.2e} and may be {:.2e}", condition.value, condition.possible)
     } else {
         format!("at least {:.2e}", condition.value)
     };
     if condition.hopeless() {
         Some(format!(
-            "The system is singular to working precision: its condition is {value}, beyond 1e13. At strength 0 the model is not determined in double precision and may be wrong in every digit. Scale or centre the columns, remove dependent ones, or use a strength above 0."
+            "The system {} singular to working precision: its condition is {value}, beyond 1e13. At strength 0 the model is not determined in double precision and may be wrong in every digit. Scale or centre the columns, remove dependent ones, or use a strength above 0.",
+            if condition.exact || condition.value > sweep::conditioning::CONDITION_MAX {
+                "is"
+            } else {
+                "may be"
+            }
         ))
     } else if condition.value > 1e8 {
         Some(format!(

@@ -4,7 +4,7 @@
 //! y += a p,  g −= a (t + λ² p),  γ' = ‖g‖²,  p ← g + (γ'/γ) p
 //!
 //! The gradient g is recurred and drifts from its definition. Every [`REFRESH_STEPS`] steps, and
-//! whenever the recurred gradient claims convergence, a pass recomputes it; a track is believed
+//! whenever the recurred gradient claims convergence or a recurred norm has no digit left, a pass recomputes it; a track is believed
 //! right after that only. Where the recomputed gradient stays behind the recurred one, rounding
 //! has the last word: the lane reports its floor instead of going on, since beyond it the
 //! iteration diverges. The step length is an exact line search (pᵀg, not ‖g‖²), so that a
@@ -39,8 +39,11 @@ struct LaneState {
     /// pᵀg and ‖p‖².
     slope: f64,
     direction_squared: f64,
-    /// ‖[r; λy]‖².
+    /// ‖[r; λy]‖², and what it was when last recomputed: the recurred one is a difference from it.
     total_squared: f64,
+    total_squared_refreshed: f64,
+    /// The last direction was one that the operator takes to nothing but rounding.
+    null_direction: bool,
     /// ‖y‖².
     model_squared: f64,
     trusted: bool,
@@ -204,7 +207,11 @@ impl<'a> Cgls<'a> {
         for place in 0..k {
             let lane = &mut self.lanes[self.live[place]];
             let delta = self.squares[place] + lane.damping.powi(2) * lane.direction_squared;
-            self.factor[place] = if delta > 0.0 && !lane.floor { lane.slope / delta } else { 0.0 };
+            // ‖Ãp‖ below ε‖Ã‖‖p‖ is rounding: a step of slope/δ would go anywhere.
+            let least = (f64::EPSILON * lane.frobenius).powi(2) * lane.direction_squared;
+            lane.null_direction = delta <= least;
+            let moves = !lane.null_direction && !lane.floor;
+            self.factor[place] = if moves { lane.slope / delta } else { 0.0 };
             lane.total_squared -= self.factor[place] * lane.slope;
         }
         let (lanes, live, step) = (&self.lanes, &self.live, &self.factor);
@@ -268,6 +275,8 @@ impl LaneState {
             slope: 0.0,
             direction_squared: 0.0,
             total_squared: 0.0,
+            total_squared_refreshed: 0.0,
+            null_direction: false,
             model_squared: 0.0,
             trusted: true,
             smallest: f64::INFINITY,
@@ -281,7 +290,12 @@ impl LaneState {
     /// The recurred gradient or residual says that the lane is done.
     fn claims(&self, rules: &StopRules) -> bool {
         let total = self.total_squared.max(0.0).sqrt();
-        self.gamma.sqrt() <= rules.gradient_tolerance.max(f64::EPSILON) * self.frobenius * total
+        // Every step since took a rounding error of the starting value: no digit is left.
+        let lost = 2.0 * REFRESH_STEPS as f64 * f64::EPSILON * self.total_squared_refreshed;
+        self.null_direction
+            || self.total_squared <= lost
+            || self.gamma.sqrt()
+                <= rules.gradient_tolerance.max(f64::EPSILON) * self.frobenius * total
             || total <= self.rounding().max(rules.residual_tolerance * self.data_norm)
     }
 
@@ -292,13 +306,15 @@ impl LaneState {
     /// Takes recomputed sums; returns whether the direction can be kept.
     fn accept_refresh(&mut self, gamma: f64, model_squared: f64, residual_squared: f64) -> bool {
         let (recomputed, recurred) = (gamma.sqrt(), self.gamma.sqrt());
-        let drifted = recomputed > DRIFT * recurred;
+        let drifted = recomputed > DRIFT * recurred || self.null_direction;
         let progressed = recomputed <= 0.5 * self.smallest;
         self.idle = if drifted && !progressed { self.idle + 1 } else { 0 };
         self.smallest = self.smallest.min(recomputed);
         self.gamma = gamma;
         self.model_squared = model_squared;
         self.total_squared = residual_squared + self.damping.powi(2) * model_squared;
+        self.total_squared_refreshed = self.total_squared;
+        self.null_direction = false;
         self.trusted = true;
         self.floor =
             self.idle >= IDLE_REFRESHES_MAX || recomputed <= 0.1 * self.frobenius * self.rounding();

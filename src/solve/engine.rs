@@ -325,9 +325,11 @@ impl Run<'_, '_> {
             .filter_map(|lane| self.recurrence.process(lane).cloned())
             .collect();
         let mut candidates: Vec<Candidate> = Vec::with_capacity(self.tracks.len());
+        let mut step_norms = Vec::with_capacity(self.tracks.len());
         for (place, track) in self.tracks.iter().enumerate() {
             let mut model = vec![0.0; n];
             self.recurrence.model(place, &mut model);
+            step_norms.push(sums::norm(&model));
             for (j, y) in model.iter_mut().enumerate() {
                 *y = self.problem.origin_at(j, track.set) + self.problem.matrix.scale(j) * *y;
             }
@@ -341,14 +343,14 @@ impl Run<'_, '_> {
         // Blocks and tracks are given back before the certificate takes memory of its own.
         drop(self.recurrence);
         let mut solved = Vec::with_capacity(candidates.len());
-        let mut tracks = self.tracks.iter();
+        let mut tracks = self.tracks.iter().zip(step_norms);
         while !candidates.is_empty() {
             let rest = candidates.split_off(candidates.len().min(certificate::WIDTH_MAX));
             let group = std::mem::replace(&mut candidates, rest);
             passes += 1;
             for certified in certificate::certify(self.problem, &self.frobenius, group) {
-                let track = tracks.next().expect("a track for each candidate");
-                solved.push(resolve(track, certified, self.rules));
+                let (track, step_norm) = tracks.next().expect("a track for each candidate");
+                solved.push(resolve(track, step_norm, certified, self.rules));
             }
         }
         Outcome {
@@ -363,15 +365,15 @@ impl Run<'_, '_> {
     }
 }
 
-/// Recomputed norms have the last word on why a track stopped.
-fn resolve(track: &TrackState, certified: Certified, rules: &StopRules) -> Solved {
+/// Recomputed norms have the last word on why a track stopped. `step_norm` is ‖y‖: rounding and
+/// gradient are compared in the operator's own variables, where the columns may have been evened out.
+fn resolve(track: &TrackState, step_norm: f64, certified: Certified, rules: &StopRules) -> Solved {
     let Certified { mut solved, relative_gradient_in_steps: relative } = certified;
-    let rounding =
-        track.rounding_fixed + rounding_of_residual(track.frobenius, solved.model_norm, 0.0);
+    let rounding = track.rounding_fixed + rounding_of_residual(track.frobenius, step_norm, 0.0);
+    let total = solved.residual_norm.hypot(track.strength * solved.penalty_norm);
     let null = track.strength == 0.0 && solved.residual_norm <= 10.0 * rounding;
     let tolerance = rules.gradient_tolerance;
-    let at_floor = solved.gradient_norm <= 10.0 * track.frobenius.max(1e-300) * rounding
-        || relative <= 10.0 * f64::EPSILON;
+    let at_floor = relative * total <= 10.0 * rounding || relative <= 10.0 * f64::EPSILON;
     let candidate = track.stop.expect("a stopped track");
     solved.stop = match candidate {
         Stop::NotFinite(_) | Stop::ZeroData => candidate,

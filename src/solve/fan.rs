@@ -50,9 +50,10 @@ struct Track<R> {
 
 /// The first vectors of the process, kept so that strengths chosen later can be caught up.
 struct Scouted {
-    steps_max: usize,
-    /// v₁, v₂, … each n×k.
+    /// v₁, v₂, … each n×k; room for all of them is made before the first step.
     vectors: Vec<Vec<f64>>,
+    /// How many of them are filled.
+    kept: usize,
     opened: bool,
 }
 
@@ -80,9 +81,10 @@ impl<'a, R: Rotations> Fan<'a, R> {
     ) -> Self {
         let process = GolubKahan::new(problem, frobenius, steps_max);
         let unknowns = problem.unknowns();
-        let scouted = scout_steps.map(|steps_max| Scouted {
-            steps_max,
-            vectors: Vec::with_capacity(steps_max + 1),
+        let block = unknowns * problem.lanes.len();
+        let scouted = scout_steps.map(|steps| Scouted {
+            vectors: (0..=steps).map(|_| vec![0.0; block]).collect(),
+            kept: 0,
             opened: false,
         });
         let strengths: Vec<(usize, f64)> = problem
@@ -189,15 +191,16 @@ impl<'a, R: Rotations> Fan<'a, R> {
     }
 
     fn replay_pending(&self) -> bool {
-        self.scouted.as_ref().is_some_and(|s| s.opened && self.replayed + 1 < s.vectors.len())
+        self.scouted.as_ref().is_some_and(|s| s.opened && self.replayed + 1 < s.kept)
     }
 
     fn keep_vector(&mut self) {
         if let Some(scouted) = &mut self.scouted
             && !scouted.opened
-            && scouted.vectors.len() <= scouted.steps_max
+            && let Some(room) = scouted.vectors.get_mut(scouted.kept)
         {
-            scouted.vectors.push(self.process.v.clone());
+            room.copy_from_slice(&self.process.v);
+            scouted.kept += 1;
         }
     }
 }

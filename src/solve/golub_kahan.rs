@@ -98,8 +98,11 @@ impl<'a> GolubKahan<'a> {
 
     pub fn bytes(&self) -> u64 {
         let k = self.sets.len();
-        8 * (self.u.capacity() + self.v.capacity() + self.s.capacity() + self.sums.len()) as u64
-            + self.operator.scratch_bytes(k)
+        let scalars =
+            |lane: &LaneState| lane.process.alphas.capacity() + lane.process.betas.capacity();
+        let kept: usize = self.lanes.iter().map(scalars).sum();
+        let blocks = self.u.capacity() + self.v.capacity() + self.s.capacity() + self.sums.len();
+        8 * (blocks + kept) as u64 + self.operator.scratch_bytes(k)
     }
 
     pub fn width(&self) -> usize {

@@ -14,6 +14,7 @@ pub mod engine;
 pub mod fan;
 pub mod golub_kahan;
 pub mod history;
+mod jacobi;
 pub mod lsmr;
 pub mod lsqr;
 pub mod pieces;
@@ -98,6 +99,7 @@ pub trait Recurrence {
     /// The lane's Golub–Kahan scalars; `None` for methods without.
     fn process(&self, lane: usize) -> Option<&Process>;
 
-    /// Bytes of blocks, tracks and scratch.
+    /// Bytes of blocks, tracks, scratch and room for α and β; lists of a few numbers a lane or
+    /// track are left out.
     fn workspace_bytes(&self) -> u64;
 }

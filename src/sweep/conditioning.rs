@@ -13,16 +13,35 @@ pub struct Condition {
     /// From a dense decomposition; otherwise from the process, which can only miss small singular values: the
     /// true condition is at least this.
     pub exact: bool,
+    /// As high as it may be, as far as one can tell; `value` where nothing else is known.
+    pub possible: f64,
 }
 
 impl Condition {
     /// From the bidiagonal of a process; `None` before its first step.
     pub fn of_process(process: &Process) -> Option<Self> {
         let (largest, smallest) = process.singular_values_extreme()?;
-        Some(Self { value: largest / smallest, exact: false })
+        let value = largest / smallest;
+        Some(Self { value, exact: false, possible: value })
+    }
+
+    /// Where the columns were evened out. `span` is the largest over the smallest column norm,
+    /// `process` that of the even columns, `columns` their number.
+    ///
+    /// κ(WA) ≥ span. Even columns have, to √n, the smallest condition of all scalings (van der
+    /// Sluis, Numer. Math. 14:14, 1969), so κ(WA) ≥ κ(WAD)/√n; and κ(WA) ≤ κ(WAD)·span.
+    pub fn of_evened(span: f64, process: Option<&Process>, columns: usize) -> Self {
+        let evened = process.and_then(Self::of_process).map_or(1.0, |even| even.value);
+        let value = span.max(evened / (columns as f64).sqrt());
+        Self { value, exact: false, possible: value.max(span * evened) }
+    }
+
+    /// From a dense decomposition.
+    pub fn exact(value: f64) -> Self {
+        Self { value, exact: true, possible: value }
     }
 
     pub fn hopeless(&self) -> bool {
-        self.value.is_nan() || self.value > CONDITION_MAX
+        self.possible.is_nan() || self.possible > CONDITION_MAX
     }
 }
