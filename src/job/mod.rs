@@ -7,6 +7,7 @@ pub mod load;
 pub mod rerun;
 pub mod settings;
 pub mod typed;
+pub mod words;
 pub mod write;
 
 pub use conduct::{Finished, conduct};
