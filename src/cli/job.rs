@@ -2,7 +2,7 @@
 
 use crate::base::complaint::show;
 use crate::cli::progress::Console;
-use crate::cli::{JobArguments, Show, exit, print, say, typed};
+use crate::cli::{JobArguments, Show, exit, print, print_json, say, typed};
 use crate::job::{Command, Finished, JobError, Settings, conduct};
 use crate::report::page;
 use crate::report::record::Summary;
@@ -38,7 +38,7 @@ pub(super) fn run_settings(settings: &Settings, show_as: Show) -> Result<u8, Job
     };
     match (&summary, show_as.json) {
         (Some(summary), false) => print(&page::page(summary, &place)),
-        _ => print(&format!("{record:#}\n")),
+        _ => print_json(&record),
     }
     let converged = record.pointer("/stop/converged").and_then(serde_json::Value::as_bool);
     Ok(if converged == Some(true) { exit::CONVERGED } else { exit::NOT_CONVERGED })

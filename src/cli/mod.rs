@@ -4,13 +4,14 @@ mod demo;
 mod inspect;
 mod job;
 mod progress;
+mod terminal;
 
 use std::ffi::OsString;
-use std::io::Write;
 use std::path::{Path, PathBuf};
 
 use clap::{CommandFactory, FromArgMatches, Parser, Subcommand};
 
+use crate::cli::terminal::{print, print_json, say};
 use crate::job::{JobError, Typed};
 use crate::{files, team};
 
@@ -113,14 +114,17 @@ const NOT_FOR_INSPECT: [&str; 17] = [
 
 /// Parses, runs, prints; returns the exit code.
 pub fn main(arguments: impl IntoIterator<Item = OsString>) -> u8 {
-    let parsed = command().try_get_matches_from(arguments);
-    let arguments = match parsed.and_then(|matches| Arguments::from_arg_matches(&matches)) {
+    let words: Vec<OsString> = arguments.into_iter().collect();
+    let parse = |words: Vec<OsString>| {
+        let matches = command().try_get_matches_from(words)?;
+        Arguments::from_arg_matches(&matches)
+    };
+    let arguments = match parse(words.clone()) {
         Ok(arguments) => arguments,
         Err(error) => {
+            terminal::print_parsed(&error, &words, |quoted| parse(quoted).map(|_| ()));
             // Help and version are asked for; the rest is a fault in usage.
-            let code = if error.use_stderr() { exit::USAGE } else { exit::CONVERGED };
-            let _ = error.print();
-            return code;
+            return if error.use_stderr() { exit::USAGE } else { exit::CONVERGED };
         }
     };
     let result = refuse_several().and_then(|()| match arguments.command {
@@ -177,15 +181,4 @@ fn typed(job: Option<&Path>, flags: Typed) -> Result<Typed, JobError> {
     let read: Typed = files::job_file::read(path)?;
     let folder = path.parent().unwrap_or(Path::new(""));
     Ok(read.rebased(folder).overridden_by(flags))
-}
-
-/// A message, to stderr. A closed stderr is no reason to fail.
-fn say(text: &str) {
-    let _ = writeln!(std::io::stderr().lock(), "{text}");
-}
-
-/// A result, to stdout. A reader that closed the pipe has seen enough.
-fn print(text: &str) {
-    let mut out = std::io::stdout().lock();
-    let _ = out.write_all(text.as_bytes()).and_then(|()| out.flush());
 }

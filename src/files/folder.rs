@@ -25,6 +25,7 @@ pub enum Step {
     Write,
     SyncFile,
     Rename,
+    Remove,
     SyncFolder,
     OpenLog,
 }
@@ -37,6 +38,7 @@ impl Step {
             Self::Write => "write",
             Self::SyncFile => "bring the content to the disk",
             Self::Rename => "move the finished file to its place",
+            Self::Remove => "remove the file of an earlier run",
             Self::SyncFolder => "bring the folder to the disk",
             Self::OpenLog => "open the log",
         }
@@ -73,6 +75,11 @@ impl Folder {
     /// The system refuses, or a file of that name is in the way.
     pub fn create(path: &Path) -> Result<Self, FileError> {
         Self::create_gated(path, Arc::new(OpenGate))
+    }
+
+    /// A folder to read from: nothing is created, and it need not be there.
+    pub fn at(path: &Path) -> Self {
+        Self { path: path.to_path_buf(), gate: Arc::new(OpenGate) }
     }
 
     /// As [`Folder::create`], with a gate of one's own.
@@ -149,6 +156,26 @@ impl Folder {
         // If this fails the temporary file is removed when the error is dropped.
         self.step(Step::Rename, &path, || file.persist(&path).map_err(|failed| failed.error))?;
         self.step(Step::SyncFolder, &path, || sync_folder(&self.path))
+    }
+
+    /// Removes files of an earlier run, those that are there. Panics as [`Folder::place`].
+    ///
+    /// # Errors
+    /// The system refuses; files named later are then still there.
+    pub fn remove(&self, names: &[&str]) -> Result<(), FileError> {
+        let mut any = false;
+        for name in names {
+            let path = self.place(name);
+            any |= self.step(Step::Remove, &path, || match fs::remove_file(&path) {
+                Ok(()) => Ok(true),
+                Err(error) if error.kind() == io::ErrorKind::NotFound => Ok(false),
+                Err(error) => Err(error),
+            })?;
+        }
+        if any {
+            self.step(Step::SyncFolder, &self.path, || sync_folder(&self.path))?;
+        }
+        Ok(())
     }
 
     /// Writes an array of f64 in C order as .npy, version 1.
@@ -331,6 +358,26 @@ mod tests {
             assert!(gated.append("log.jsonl", "{}\n").is_err());
             assert_eq!(folder.read("log.jsonl").unwrap().unwrap().len(), 16);
         }
+    }
+
+    #[test]
+    fn files_of_an_earlier_run_are_removed_where_they_are() {
+        let home = tempfile::tempdir().unwrap();
+        let folder = Folder::create(home.path()).unwrap();
+        for name in ["a", "b", "kept"] {
+            folder.write(name, b"1").unwrap();
+        }
+        // The second of two removals fails: the first is done, the other not.
+        let gated = Folder { gate: failing(1), ..folder.clone() };
+        assert!(gated.remove(&["a", "b"]).is_err());
+        assert_eq!(folder.read("a").unwrap(), None);
+        assert!(folder.read("b").unwrap().is_some());
+        folder.remove(&["a", "b"]).unwrap();
+        let names: Vec<_> =
+            fs::read_dir(home.path()).unwrap().map(|e| e.unwrap().file_name()).collect();
+        assert_eq!(names, ["kept"]);
+        fs::create_dir(home.path().join("b")).unwrap();
+        assert!(folder.remove(&["b"]).is_err(), "a folder is not ours to remove");
     }
 
     #[test]

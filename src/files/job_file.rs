@@ -6,6 +6,7 @@ use serde::de::DeserializeOwned;
 
 use super::FileError;
 use crate::base::Complaint;
+use crate::base::complaint::escape;
 
 /// Reads a job file into the caller's typed settings.
 ///
@@ -30,13 +31,27 @@ pub fn read<T: DeserializeOwned>(path: &Path) -> Result<T, FileError> {
     };
     let deserializer = toml::de::Deserializer::parse(text).map_err(|error| {
         let offset = error.span().map_or(0, |span| span.start);
-        at(offset, Complaint::new(format!("not TOML: {}", error.message()), remedy))
+        at(offset, Complaint::new(format!("not TOML: {}", short(error.message())), remedy))
     })?;
     serde_path_to_error::deserialize(deserializer).map_err(|error| {
         let key = error.path().to_string();
         let inner = error.into_inner();
         let offset = inner.span().map_or(0, |span| span.start);
-        let whose = if key == "." { String::new() } else { format!("{key}: ") };
-        at(offset, Complaint::new(format!("{whose}{}", inner.message()), remedy))
+        let whose = if key == "." { String::new() } else { format!("{}: ", short(&key)) };
+        at(offset, Complaint::new(format!("{whose}{}", short(inner.message())), remedy))
     })
+}
+
+/// A message of the parser, which may repeat keys and values of the user's: these can be of any
+/// length and hold control characters. What the parser says itself comes last and is kept.
+fn short(message: &str) -> String {
+    const HEAD: usize = 200;
+    const TAIL: usize = 600;
+    let characters = message.chars().count();
+    if characters <= HEAD + TAIL {
+        return escape(message);
+    }
+    let head: String = message.chars().take(HEAD).collect();
+    let tail: String = message.chars().skip(characters - TAIL).collect();
+    format!("{}…{}", escape(&head), escape(&tail))
 }

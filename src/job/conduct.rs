@@ -2,9 +2,10 @@
 
 use std::time::{Duration, Instant};
 
-use serde_json::Value;
+use serde_json::{Value, json};
 
 use crate::appraise::misfit;
+use crate::base::complaint::quote;
 use crate::base::{Complaint, Warning};
 use crate::choose::{self, Choice, Curve, Point, Rule};
 use crate::files::Folder;
@@ -79,22 +80,29 @@ pub fn conduct(
 ) -> Result<Finished, JobError> {
     let begun = Instant::now();
     let inputs = load::identities(&settings.source)?;
-    // Before anything is computed, and before the folder is made.
-    if settings.out.join("summary.json").exists() {
-        let folder = Folder::create(&settings.out)?;
-        if let Standing::Same(record) = rerun::standing(&folder, settings, &inputs)? {
-            return Ok(Finished::Before(record));
-        }
+    // Before anything is read that takes long, and before the folder is made.
+    let earlier = Folder::at(&settings.out);
+    if let Standing::Same(record) = rerun::standing(&earlier, settings, &inputs)? {
+        return Ok(Finished::Before(record));
     }
     let Loaded { system, start, warnings } = load::load(&settings.source)?;
     let facts = system.facts();
     let load_seconds = begun.elapsed().as_secs_f64();
-    let work = Work { settings, system: &system, facts: &facts, start };
-    let mut run = work.run(threads, watch, begun)?;
+    let work = Work { settings, system: &system, facts: &facts, start, begun };
+    work.refuse_direct()?;
+    // From here a signal no longer ends the process at once.
+    watch.interrupted();
+    // A folder that cannot be written must show now, not after hours of work.
+    let folder = Folder::create(&settings.out)?;
+    write::log(&folder, json!({ "event": "started", "command": settings.command.word() }))?;
+    let mut run = work.run(threads, watch).inspect_err(|error| {
+        let event = json!({ "event": "failed", "cause": error.to_string() });
+        // The error itself is what the user must see.
+        let _ = write::log(&folder, event);
+    })?;
     run.load_seconds = load_seconds;
     let read = warnings.iter().map(Warning::to_string);
     run.warnings = read.chain(std::mem::take(&mut run.warnings)).collect();
-    let folder = Folder::create(&settings.out)?;
     Ok(Finished::New(Box::new(write::write(&folder, &run, inputs)?)))
 }
 
@@ -103,15 +111,11 @@ struct Work<'a> {
     system: &'a System,
     facts: &'a Facts,
     start: Option<ndarray::Array2<f64>>,
+    begun: Instant,
 }
 
 impl<'a> Work<'a> {
-    fn run(
-        &self,
-        threads: &'a Threads,
-        watch: &dyn Watch,
-        begun: Instant,
-    ) -> Result<Run<'a>, JobError> {
+    fn run(&self, threads: &'a Threads, watch: &dyn Watch) -> Result<Run<'a>, JobError> {
         let settings = self.settings;
         let solving = Instant::now();
         let held = held(self.system);
@@ -137,7 +141,7 @@ impl<'a> Work<'a> {
             warnings: Vec::new(),
             load_seconds: 0.0,
             solve_seconds: 0.0,
-            begun,
+            begun: self.begun,
         };
         let bare = Weighted::new(&self.system.matrix, &self.system.weights, None);
         if settings.method == MethodName::Direct {
@@ -195,7 +199,10 @@ impl<'a> Work<'a> {
                 max_iterations: settings
                     .max_iterations
                     .unwrap_or_else(|| StopRules::max_iterations_default(m, n)),
-                time_limit: settings.time_limit.map(|d| Duration::from_secs_f64(d.seconds)),
+                // From the start of the command: a queue that grants an hour counts loading too.
+                time_limit: settings
+                    .time_limit
+                    .map(|limit| self.begun + Duration::from_secs_f64(limit.seconds)),
             },
         }
     }
@@ -225,7 +232,11 @@ impl<'a> Work<'a> {
         squares.filter(|(j, _)| !held.is_some_and(|h| h[*j])).map(|(_, s)| s.sqrt()).collect()
     }
 
-    fn direct(&self, request: &Request<'_>, run: &mut Run<'_>) -> Result<(), JobError> {
+    /// What `--method direct` cannot take.
+    fn refuse_direct(&self) -> Result<(), JobError> {
+        if self.settings.method != MethodName::Direct {
+            return Ok(());
+        }
         let (m, n) = (self.system.matrix.rows(), self.system.matrix.columns());
         if !direct::fits(m, n) {
             return Err(JobError::TooLarge(Complaint::new(
@@ -236,14 +247,19 @@ impl<'a> Work<'a> {
                 ),
             )));
         }
-        if request.penalty.is_some_and(|p| {
-            p.iter().zip(0..).any(|(p, j)| *p == 0.0 && !request.held.is_some_and(|held| held[j]))
-        }) {
+        let held = held(self.system);
+        let free = |j: usize| !held.as_ref().is_some_and(|held| held[j]);
+        let penalty = self.system.columns.penalty_weights.as_ref();
+        if penalty.is_some_and(|p| p.iter().zip(0..).any(|(p, j)| *p == 0.0 && free(j))) {
             return Err(JobError::Usage(Complaint::new(
                 "--method direct needs a penalty on every unknown, and some have penalty_weight 0",
                 "use --method lsqr, or give them a small positive weight",
             )));
         }
+        Ok(())
+    }
+
+    fn direct(&self, request: &Request<'_>, run: &mut Run<'_>) -> Result<(), JobError> {
         let dense = sweep::dense::run(request).ok_or_else(|| {
             JobError::BrokeDown(Complaint::new(
                 "the singular value decomposition did not converge",
@@ -304,7 +320,8 @@ impl<'a> Work<'a> {
                 "Strength 0 with fewer data than unknowns: of all models that fit, the one nearest to the start is found, and on the way the number of iterations acts as the regularisation. `ellbow sweep` looks at strengths above 0.".into(),
             );
         }
-        let stated = self.system.reference.is_some() || self.start.is_some();
+        // A start says where to begin, and fixed unknowns say nothing of the others.
+        let stated = self.settings.source.reference.is_some();
         for (set, facts) in self.facts.sets.iter().enumerate() {
             if let Some(fit) = facts.constant.as_ref().filter(|fit| fit.share > 0.5)
                 && !stated
@@ -317,7 +334,7 @@ impl<'a> Work<'a> {
                 };
                 run.warnings.push(format!(
                     "{of} constant model of {:.6e} {} explains {:.1} % of the data (squared, weighted), but the penalty pulls towards 0: give --reference fit or --reference {:.4e}.",
-                    fit.value, self.system.units.model, 100.0 * fit.share, fit.value
+                    fit.value, quote(self.system.units.model.as_bytes()), 100.0 * fit.share, fit.value
                 ));
             }
         }

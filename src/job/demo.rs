@@ -4,7 +4,7 @@ use std::fmt::Write as _;
 use std::path::{Path, PathBuf};
 
 use crate::base::Complaint;
-use crate::base::complaint::{escape, show};
+use crate::base::complaint::{quote, show};
 use crate::base::sums::norm;
 use crate::files::Folder;
 use crate::files::vector::{self, NonFinite};
@@ -46,7 +46,7 @@ pub fn find(name: &str) -> Result<&'static Problem, JobError> {
             .map(|problem| format!("{} ({})", problem.name, problem.about))
             .collect();
         JobError::Usage(Complaint::new(
-            format!("there is no demo called {:?}", escape(name)),
+            format!("there is no demo called \"{}\"", quote(name.as_bytes())),
             format!("choose one of: {}", known.join(", ")),
         ))
     })

@@ -8,6 +8,7 @@ pub mod quick_fit;
 pub mod rerun;
 pub mod settings;
 pub mod typed;
+pub mod words;
 pub mod write;
 
 pub use conduct::{Finished, conduct};

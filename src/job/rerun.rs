@@ -3,6 +3,7 @@
 use serde_json::Value;
 
 use crate::base::Complaint;
+use crate::base::complaint::quote;
 use crate::files::Folder;
 use crate::job::{JobError, Settings};
 use crate::report::record::InputRecord;
@@ -38,7 +39,9 @@ pub fn standing(
     let Ok(record) = serde_json::from_slice::<Value>(&content) else {
         return refused("the folder holds a summary.json that is not a record".into());
     };
-    let wanted = serde_json::to_value(settings).expect("settings are plain values");
+    // The same inputs make a system of the same size; other inputs are a difference anyway.
+    let size = |key: &str| record.pointer(key).and_then(Value::as_u64).unwrap_or(0) as usize;
+    let wanted = settings.resolved(size("/system/rows"), size("/system/columns"));
     let mut differences = Vec::new();
     let stated = record.get("settings").cloned().unwrap_or_default();
     compare("", &stated, &wanted, &mut differences);
@@ -71,9 +74,17 @@ fn compare(key: &str, before: &Value, now: &Value, differences: &mut Vec<String>
                 compare(&below, &at(before), &at(now), differences);
             }
         }
+        (Value::Array(before), Value::Array(now)) if before.len() == now.len() => {
+            for (place, (before, now)) in before.iter().zip(now).enumerate() {
+                compare(&format!("{key}[{place}]"), before, now, differences);
+            }
+        }
         (Value::Number(a), Value::Number(b)) if a.as_f64() == b.as_f64() => {}
         _ if before == now => {}
-        _ => differences.push(format!("{key} was {before}, now {now}")),
+        _ => {
+            let shown = |value: &Value| quote(value.to_string().as_bytes());
+            differences.push(format!("{key} was {}, now {}", shown(before), shown(now)));
+        }
     }
 }
 
@@ -86,7 +97,8 @@ fn compare_inputs(before: &Value, now: &Value, differences: &mut Vec<String>) {
         let earlier = before.iter().find(|other| of(other, "path") == path);
         // A file that was not used before shows in the settings.
         if earlier.is_some_and(|earlier| of(earlier, "checksum") != of(file, "checksum")) {
-            differences.push(format!("the content of {} changed", path.unwrap_or_default()));
+            let path = path.unwrap_or_default();
+            differences.push(format!("the content of {} changed", quote(path.as_bytes())));
         }
     }
 }
@@ -99,9 +111,12 @@ mod tests {
     #[test]
     fn differences_name_their_key() {
         let mut differences = Vec::new();
-        let before = json!({"a": 1.0, "b": {"c": "x", "d": [1, 2]}});
-        let now = json!({"a": 1, "b": {"c": "y", "d": [1, 2]}, "e": true});
+        let before = json!({"a": 1.0, "b": {"c": "x", "d": [1, {"e": 2}]}});
+        let now = json!({"a": 1, "b": {"c": "y", "d": [1, {"e": 3}]}, "e": true});
         compare("", &before, &now, &mut differences);
-        assert_eq!(differences, ["b.c was \"x\", now \"y\"", "e was null, now true"]);
+        assert_eq!(
+            differences,
+            ["b.c was \"x\", now \"y\"", "b.d[1].e was 2, now 3", "e was null, now true"]
+        );
     }
 }

@@ -42,7 +42,6 @@ pub struct Source {
     pub duplicates: Duplicates,
     pub allow_nonfinite: bool,
     pub precision: Precision,
-    #[serde(skip)]
     pub grid: Option<GridTable>,
     pub units: crate::system::Units,
 }
@@ -92,7 +91,7 @@ pub struct Settings {
     pub method: MethodName,
     pub rule: Option<RuleName>,
     pub column_scaling: ScalingName,
-    /// `None`: from the size of the system.
+    /// `None`: from the size of the system; a record holds the number.
     pub max_iterations: Option<u64>,
     pub gradient_tolerance: f64,
     pub residual_tolerance: f64,
@@ -156,7 +155,7 @@ impl Source {
         })
     }
 
-    /// Every file the system is read from, in a fixed order.
+    /// Every file the system is read from, each once, in a fixed order.
     pub fn files(&self) -> Vec<PathBuf> {
         let mut files = Vec::new();
         for block in &self.blocks {
@@ -171,6 +170,12 @@ impl Source {
         let single = [&self.start, &self.rows, &self.columns, &self.linearised_at, &self.predicted];
         files.extend(single.into_iter().flatten().cloned());
         files.extend(self.grid.iter().filter_map(|grid| grid.active.clone()));
+        let mut seen = Vec::new();
+        files.retain(|file| {
+            let first = !seen.contains(file);
+            seen.push(file.clone());
+            first
+        });
         files
     }
 }
@@ -270,6 +275,14 @@ impl Settings {
         Ok(settings)
     }
 
+    /// The settings as a record shows them, for a system of this size: nothing is left to look up.
+    pub fn resolved(&self, rows: usize, columns: usize) -> serde_json::Value {
+        let limit =
+            self.max_iterations.unwrap_or_else(|| StopRules::max_iterations_default(rows, columns));
+        let all = Self { max_iterations: Some(limit), ..self.clone() };
+        serde_json::to_value(all).expect("settings are plain values")
+    }
+
     fn check(&self) -> Result<(), JobError> {
         for (name, value) in [
             ("--gradient-tolerance", Some(self.gradient_tolerance)),
@@ -297,6 +310,12 @@ impl Settings {
             return Err(usage(
                 "--noise-factor stops an unregularised iteration, and the strength is not 0",
                 "use it with --strength 0, or leave it out",
+            ));
+        }
+        if self.residual_tolerance > 0.0 && self.strengths != StrengthsWanted::One(0.0) {
+            return Err(usage(
+                "--residual-tolerance stops an unregularised iteration, and the strength is not 0",
+                "use it with --strength 0, or leave it out: at other strengths the gradient decides",
             ));
         }
         if self.method == MethodName::Direct && self.source.start.is_some() {

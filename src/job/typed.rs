@@ -8,13 +8,18 @@ use std::str::FromStr;
 use serde::Deserialize;
 use serde::de::{self, Deserializer, SeqAccess, Visitor};
 
+pub use crate::job::words::{
+    CommandName, Duplicates, DurationText, MethodName, Missing, Precision, RuleName, ScalingName,
+    StrengthRange,
+};
+
 /// All settings, none of them resolved.
 #[derive(Debug, Clone, Default, PartialEq, Deserialize, clap::Args)]
 #[serde(deny_unknown_fields)]
 pub struct Typed {
     /// In a job file: the command it was written for. What is typed on the command line decides.
     #[arg(skip)]
-    pub command: Option<String>,
+    pub command: Option<CommandName>,
 
     /// Forward model A, data unit per model unit: .mtx, .mtx.gz, .npz (SciPy CSR,
     /// CSC, COO) or 2-D .npy
@@ -78,7 +83,7 @@ pub struct Typed {
     pub precision: Option<Precision>,
 
     /// Strength λ ≥ 0 of one reconstruction, squared in the objective
-    #[arg(long, value_name = "λ", help_heading = "Strength")]
+    #[arg(long, allow_negative_numbers = true, value_name = "λ", help_heading = "Strength")]
     pub strength: Option<f64>,
 
     /// Take the strength of a finished run's folder
@@ -117,19 +122,20 @@ pub struct Typed {
 
     /// Relative gradient that counts as converged; 0 asks for rounding level
     /// [default: 1e-8]
-    #[arg(long, value_name = "T", help_heading = "Solver")]
+    #[arg(long, allow_negative_numbers = true, value_name = "T", help_heading = "Solver")]
     pub gradient_tolerance: Option<f64>,
 
     /// λ = 0 only: residual norm over data norm that counts as converged
     /// [default: 0, rounding level]
-    #[arg(long, value_name = "T", help_heading = "Solver")]
+    #[arg(long, allow_negative_numbers = true, value_name = "T", help_heading = "Solver")]
     pub residual_tolerance: Option<f64>,
 
     /// λ = 0 only: stop at a residual norm of τ√m (needs --uncertainty)
-    #[arg(long, value_name = "τ", help_heading = "Solver")]
+    #[arg(long, allow_negative_numbers = true, value_name = "τ", help_heading = "Solver")]
     pub noise_factor: Option<f64>,
 
-    /// Stop after this time with what is there, e.g. 90s, 55m, 2h
+    /// Stop this long after the start, loading included, with what is there, e.g.
+    /// 90s, 55m, 2h
     #[arg(long, value_name = "D", help_heading = "Solver")]
     pub time_limit: Option<DurationText>,
 
@@ -186,7 +192,7 @@ pub struct UnitsTable {
     pub plausible: Option<[f64; 2]>,
 }
 
-#[derive(Debug, Clone, PartialEq, Deserialize)]
+#[derive(Debug, Clone, PartialEq, Deserialize, serde::Serialize)]
 #[serde(deny_unknown_fields)]
 pub struct GridTable {
     pub axes: Vec<String>,
@@ -204,9 +210,15 @@ pub struct GridTable {
 pub struct NumberOrText(pub String);
 
 impl FromStr for NumberOrText {
-    type Err = std::convert::Infallible;
-    fn from_str(text: &str) -> Result<Self, Self::Err> {
-        Ok(Self(text.to_owned()))
+    type Err = String;
+    /// A flag's value may be a negative number; anything else that begins with `-` is the next
+    /// option, before which the value was forgotten.
+    fn from_str(text: &str) -> Result<Self, String> {
+        let value = Self(text.to_owned());
+        if text.starts_with('-') && value.number().is_none() {
+            return Err("a value is missing; write ./-name for a file that begins with -".into());
+        }
+        Ok(value)
     }
 }
 
@@ -262,89 +274,13 @@ impl<'de> Deserialize<'de> for Data {
     }
 }
 
-/// Words for a choice, the same on the command line and in a job file.
-macro_rules! words {
-    ($(#[$meta:meta])* $name:ident { $($variant:ident = $word:literal),+ }) => {
-        $(#[$meta])*
-        #[derive(Debug, Clone, Copy, PartialEq, Eq, Deserialize, serde::Serialize)]
-        pub enum $name { $(#[serde(rename = $word)] $variant),+ }
-
-        impl FromStr for $name {
-            type Err = String;
-            fn from_str(text: &str) -> Result<Self, String> {
-                match text {
-                    $($word => Ok(Self::$variant),)+
-                    _ => Err(format!("one of: {}", [$($word),+].join(", "))),
-                }
-            }
-        }
-    };
-}
-
-words!(Missing { Nan = "nan" });
-words!(Duplicates { Sum = "sum", Error = "error", Last = "last" });
-words!(Precision { Double = "double", Single = "single" });
-words!(RuleName { Corner = "corner", CornerPruned = "corner-pruned", NoisePlain = "noise-plain" });
-words!(MethodName { Lsqr = "lsqr", Lsmr = "lsmr", Cgls = "cgls", Direct = "direct" });
-words!(ScalingName { Auto = "auto", On = "on", Off = "off" });
-
-/// Defines a type read from text, with its own rule.
-macro_rules! from_text {
-    ($name:ident) => {
-        impl<'de> Deserialize<'de> for $name {
-            fn deserialize<D: Deserializer<'de>>(deserializer: D) -> Result<Self, D::Error> {
-                let text = String::deserialize(deserializer)?;
-                text.parse().map_err(de::Error::custom)
-            }
-        }
-    };
-}
-
-/// `FROM..TO`, both positive.
-#[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
-pub struct StrengthRange {
-    pub from: f64,
-    pub to: f64,
-}
-from_text!(StrengthRange);
-
-impl FromStr for StrengthRange {
-    type Err = String;
-    fn from_str(text: &str) -> Result<Self, String> {
-        let number =
-            |part: &str| part.trim().parse::<f64>().ok().filter(|x| *x > 0.0 && x.is_finite());
-        text.split_once("..")
-            .and_then(|(from, to)| Some(Self { from: number(from)?, to: number(to)? }))
-            .ok_or_else(|| "two positive numbers with two dots between, e.g. 1e-4..10".into())
-    }
-}
-
-/// A duration: a number and one of `s`, `m`, `h`, e.g. `90s`, `0.2s`, `55m`, `2h`.
-#[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
-#[serde(transparent)]
-pub struct DurationText {
-    pub seconds: f64,
-}
-from_text!(DurationText);
-
-impl FromStr for DurationText {
-    type Err = String;
-    fn from_str(text: &str) -> Result<Self, String> {
-        let units = [("s", 1.0), ("m", 60.0), ("h", 3600.0)];
-        units
-            .iter()
-            .find_map(|(unit, factor)| Some((text.strip_suffix(unit)?, factor)))
-            .and_then(|(number, factor)| Some(factor * number.parse::<f64>().ok()?))
-            // A century: beyond it a sum of times could overflow.
-            .filter(|seconds| *seconds > 0.0 && *seconds < 3.2e9)
-            .map(|seconds| Self { seconds })
-            .ok_or_else(|| "a positive number with s, m or h, e.g. 90s, 55m, 2h".into())
-    }
-}
-
 impl Typed {
     /// These settings with `flags` winning wherever they say something.
-    pub fn overridden_by(self, flags: Self) -> Self {
+    pub fn overridden_by(mut self, flags: Self) -> Self {
+        // Two ways of saying one thing: whichever is a flag replaces both.
+        if flags.strength.is_some() || flags.strength_from.is_some() {
+            (self.strength, self.strength_from) = (None, None);
+        }
         macro_rules! either {
             ($($field:ident),+ $(,)?) => { Self { $($field: flags.$field.or(self.$field)),+ } };
         }

@@ -2,7 +2,7 @@
 
 use std::fmt::Write as _;
 
-use serde_json::json;
+use serde_json::{Value, json};
 
 use crate::appraise::misfit;
 use crate::choose::corner;
@@ -17,6 +17,18 @@ use crate::report::record::{
 use crate::solve::Solved;
 use crate::system::System;
 
+/// Every file that a run may write besides its log; the one that vouches for the others first.
+const RESULTS: [&str; 8] = [
+    "summary.json",
+    "model.npy",
+    "residual.npy",
+    "predicted.npy",
+    "model_grid.npy",
+    "models.npy",
+    "sweep.csv",
+    "history.csv",
+];
+
 /// Writes every file of a finished run and returns its record.
 ///
 /// # Errors
@@ -26,6 +38,9 @@ pub fn write(
     run: &Run<'_>,
     inputs: Vec<InputRecord>,
 ) -> Result<Summary, JobError> {
+    // An earlier run's summary would vouch for files that are being replaced, and what that run
+    // wrote and this one does not would be taken for this one's.
+    folder.remove(&RESULTS)?;
     let (m, n) = (run.system.matrix.rows(), run.system.matrix.columns());
     let sets = run.sets.len();
     let per_set = |length: usize| if sets == 1 { vec![length] } else { vec![sets, length] };
@@ -59,7 +74,6 @@ pub fn write(
     folder.write_with("history.csv", |out| history(out, run))?;
     let summary = summary(run, inputs, table);
     let event = json!({
-        "time_unix": unix_seconds(),
         "event": if summary.interrupted { "interrupted" } else { "finished" },
         "command": summary.command,
         "ellbow_version": summary.ellbow_version,
@@ -69,27 +83,35 @@ pub fn write(
         "seconds": summary.seconds.total,
         "warnings": summary.warnings,
     });
-    folder.append("log.jsonl", &format!("{event}\n"))?;
+    log(folder, event)?;
     let text = serde_json::to_string_pretty(&summary).expect("a record of plain values");
     folder.write("summary.json", format!("{text}\n").as_bytes())?;
     Ok(summary)
 }
 
-/// Seconds since 1970, for the log.
-pub fn unix_seconds() -> u64 {
+/// Appends an event to the folder's log, with the time.
+///
+/// # Errors
+/// The log cannot be written.
+pub fn log(folder: &Folder, mut event: Value) -> Result<(), JobError> {
+    event["time_unix"] = unix_seconds().into();
+    Ok(folder.append("log.jsonl", &format!("{event}\n"))?)
+}
+
+/// Seconds since 1970.
+fn unix_seconds() -> u64 {
     let now = std::time::SystemTime::now();
     now.duration_since(std::time::UNIX_EPOCH).map_or(0, |elapsed| elapsed.as_secs())
 }
 
-/// b − Ax and Ax in data units as the user gave them; NaN in the residual of a missing datum.
+/// b − Ax and Ax in data units as the user gave them; NaN in the residual of a datum that is absent.
 fn fit(system: &System, solved: &Solved) -> (Vec<f64>, Vec<f64>) {
-    let used = |i: usize| system.rows.used.as_ref().is_none_or(|used| used[i]);
+    let absent = |i: usize| system.absent.as_ref().is_some_and(|gone| gone[[i, solved.set]]);
     let shift = |i: usize| system.data_shift.as_ref().map_or(0.0, |shift| shift[i]);
     let mut residuals = Vec::with_capacity(solved.residual.len());
     let mut predicted = Vec::with_capacity(solved.residual.len());
     for (i, residual) in solved.residual.iter().enumerate() {
-        let missing = used(i) && !system.included(i, solved.set);
-        residuals.push(if missing { f64::NAN } else { *residual });
+        residuals.push(if absent(i) { f64::NAN } else { *residual });
         predicted.push(system.data[[i, solved.set]] + shift(i) - residual);
     }
     (residuals, predicted)
@@ -220,7 +242,7 @@ fn summary(run: &Run<'_>, inputs: Vec<InputRecord>, sweep: Vec<SweepRow>) -> Sum
         schema: SCHEMA.into(),
         ellbow_version: env!("CARGO_PKG_VERSION").into(),
         command: run.settings.command.word().into(),
-        settings: settings(run),
+        settings: run.settings.resolved(run.facts.rows, run.facts.columns),
         system: system_record(run),
         method: serde_json::to_value(run.settings.method)
             .ok()
@@ -255,11 +277,6 @@ fn summary(run: &Run<'_>, inputs: Vec<InputRecord>, sweep: Vec<SweepRow>) -> Sum
         warnings: run.warnings.clone(),
         interrupted: run.interrupted,
     }
-}
-
-/// The settings as the record shows them; what a rerun compares.
-fn settings(run: &Run<'_>) -> serde_json::Value {
-    serde_json::to_value(run.settings).expect("settings are plain values")
 }
 
 fn finite(value: f64) -> Option<f64> {

@@ -82,7 +82,7 @@ fn result(out: &mut String, summary: &Summary, result: &ResultRecord) {
     let _ = writeln!(out, "Relative gradient   {:>14}", number(Some(result.relative_gradient)));
     let _ = writeln!(
         out,
-        "Orthogonality       {:>14}   norm of the residual's product with the matrix",
+        "Orthogonality       {:>14}   of the residual to the matrix, in norm",
         number(Some(result.orthogonality))
     );
     if let Some(chi_square) = result.chi_square_per_dof {
@@ -149,25 +149,30 @@ fn sweep(out: &mut String, summary: &Summary) {
 
 fn table(out: &mut String, rows: &[SweepRow], choice: &Choice) {
     let traces = rows.iter().any(|row| row.effective_parameters.is_some());
-    let _ = write!(out, "{:>12} {:>13} {:>13}", "strength", "residual norm", "penalty norm");
+    let _ = write!(out, "{:>11} {:>13} {:>12}", "strength", "residual norm", "penalty norm");
     if traces {
         let _ = write!(out, " {:>9}", "eff. par.");
     }
     let _ = writeln!(out, " {:>5}  stop", "iter");
+    let stops = rows.iter().map(|row| row.stop.len()).max().unwrap_or(0);
     let marks = marks(rows, choice);
     for (row, mark) in rows.iter().zip(marks) {
-        let _ = write!(
-            out,
-            "{:>12} {:>13} {:>13}",
+        let mut line = format!(
+            "{:>11} {:>13} {:>12}",
             short(row.strength),
             short(row.residual_norm),
             short(row.penalty_norm)
         );
         if traces {
-            let _ = write!(out, " {:>9.1}", row.effective_parameters.unwrap_or(f64::NAN));
+            let _ = write!(line, " {:>9.1}", row.effective_parameters.unwrap_or(f64::NAN));
         }
-        let line = format!(" {:>5}  {:<15} {mark}", row.iterations, row.stop);
-        let _ = writeln!(out, "{}", line.trim_end());
+        let _ = write!(line, " {:>5}  {:<stops$}", row.iterations, row.stop);
+        let beside = line.chars().count() + 1 + mark.chars().count() <= WIDTH;
+        let _ = if beside {
+            writeln!(out, "{}", format!("{line} {mark}").trim_end())
+        } else {
+            writeln!(out, "{}\n{mark:>WIDTH$}", line.trim_end())
+        };
     }
 }
 

@@ -151,7 +151,7 @@ impl Run<'_, '_> {
             self.open_tracks(&strengths);
         }
         loop {
-            let out_of_time = self.rules.time_limit.is_some_and(|limit| begun.elapsed() >= limit);
+            let out_of_time = self.rules.time_limit.is_some_and(|limit| Instant::now() >= limit);
             interrupted = interrupted
                 .or_else(|| self.watch.interrupted())
                 .or(out_of_time.then_some(Interrupt::TimeLimit));

@@ -1,6 +1,6 @@
 //! Why a track stopped, and the rules that decide it.
 
-use std::time::Duration;
+use std::time::Instant;
 
 /// Where a number stopped being finite.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -88,7 +88,8 @@ pub struct StopRules {
     /// λ = 0 only: stop at ‖r‖ ≤ τ√(rows of positive weight).
     pub noise_factor: Option<f64>,
     pub max_iterations: u64,
-    pub time_limit: Option<Duration>,
+    /// The moment at which every track stops; one for all groups of a sweep.
+    pub time_limit: Option<Instant>,
 }
 
 impl StopRules {

@@ -78,11 +78,13 @@ impl System {
             });
         }
         let mut data = join(data);
+        let absent = data.mapv(|value: f64| !value.is_finite());
+        let absent = absent.iter().any(|gone| *gone).then_some(absent);
         let left_out = leave_out(&mut data, parts.missing_nan, &names, &origins, &mut warnings)?;
         let (uncertainty, weights) = sigma::weigh(&data, origins, left_out.as_ref(), &names)?;
         let matrix = stack::stack(matrices);
         let data_shift = match &parts.linearisation {
-            Some(point) => Some(linearise(&mut data, &matrix, point, left_out.as_ref())?),
+            Some(point) => Some(linearise(&mut data, &matrix, point, absent.as_ref())?),
             None => None,
         };
         let fit = reference::Fit { matrix: &matrix, data: &data, weights: &weights };
@@ -90,6 +92,7 @@ impl System {
         let system = Self {
             matrix,
             data,
+            absent,
             data_shift,
             uncertainty,
             weights,
@@ -258,12 +261,12 @@ fn nothing_left(set: usize, sets: usize, names: &Names, origins: &[sigma::Origin
     SystemError::Data(Complaint::new(cause, remedy).in_file(&origins[0].data_path))
 }
 
-/// Turns the data into b − g(x_k) + A x_k and hands back g(x_k) − A x_k. Data left out keep 0.
+/// Turns the data into b − g(x_k) + A x_k and hands back g(x_k) − A x_k. Data that are absent keep 0.
 fn linearise(
     data: &mut Array2<f64>,
     matrix: &crate::operator::StoredRows,
     point: &Linearisation,
-    left_out: Option<&Array2<bool>>,
+    absent: Option<&Array2<bool>>,
 ) -> Result<Vec<f64>, SystemError> {
     let refuse = |word: &str, place: usize, value: f64, path: &std::path::Path| {
         let cause = format!("the {word} {} is {value}", place + 1);
@@ -285,7 +288,7 @@ fn linearise(
         })
         .collect();
     for ((i, set), datum) in data.indexed_iter_mut() {
-        if !left_out.is_some_and(|out| out[[i, set]]) {
+        if !absent.is_some_and(|gone| gone[[i, set]]) {
             *datum -= shift[i];
         }
     }

@@ -10,6 +10,7 @@ fn system(matrix: StoredRows, data: Array2<f64>, weights: RowWeights) -> System 
     System {
         matrix,
         data,
+        absent: None,
         data_shift: None,
         uncertainty: None,
         weights,

@@ -41,6 +41,8 @@ pub struct System {
     /// the rows table keeps its value, so that its residual can be looked at. Neither counts
     /// (see [`System::included`]).
     pub data: Array2<f64>,
+    /// m×k: no datum was given (NaN, or not finite in a row left out); `None` if all were.
+    pub absent: Option<Array2<bool>>,
     /// Added to `data` gives the data as read (g(x_k) − A x_k); `None` without a linearisation point. Length m.
     pub data_shift: Option<Vec<f64>>,
     /// σ in data units, m×1 or m×k; `None` if the user gave none. Unchecked where a datum does

@@ -3,7 +3,7 @@
 
 use super::{BlockSpan, ColumnTable, RowTable, System};
 use crate::base::Grid;
-use crate::base::complaint::escape;
+use crate::base::complaint::quote;
 
 impl System {
     /// E.g. `row 17 (id "S3-R9", group "S3", block "upper")`; the block only where there are
@@ -77,9 +77,9 @@ pub(super) fn column_name(j: usize, columns: &ColumnTable, cell: Option<(&Grid, 
         parts.push(quoted(name));
     }
     if let Some((grid, unknown)) = cell {
-        parts.push(escape(&grid.describe(grid.cell(unknown))));
+        parts.push(quote(grid.describe(grid.cell(unknown)).as_bytes()));
     } else if let Some(kind) = columns.kinds.as_ref().map(|k| &k[j]).filter(|k| !k.is_empty()) {
-        parts.push(escape(kind));
+        parts.push(quote(kind.as_bytes()));
     }
     with_parts(format!("column {}", j + 1), &parts)
 }
@@ -89,7 +89,7 @@ fn with_parts(name: String, parts: &[String]) -> String {
 }
 
 pub(super) fn quoted(text: &str) -> String {
-    format!("\"{}\"", escape(text))
+    format!("\"{}\"", quote(text.as_bytes()))
 }
 
 #[cfg(test)]
