@@ -269,7 +269,10 @@ fn hilbert_corner_is_found_between_the_strengths_and_gcv_sits_on_the_edge() {
             converged: solved.stop.converged(),
         })
         .collect();
-    let choice = choose(&Curve { points: &points, process: set.process.as_ref() }, None);
+    let choice = choose(
+        &Curve { points: &points, process: set.process.as_ref(), data_of_known_noise: None },
+        None,
+    );
     println!("{choice:?}");
     let corner = choice.rules.iter().find(|result| result.rule == Rule::Corner).unwrap();
     assert!(corner.applicable && !corner.at_edge);

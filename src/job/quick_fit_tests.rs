@@ -24,6 +24,7 @@ fn system() -> System {
         matrix: StoredRows::from_dense(m, n, &dense),
         data,
         data_shift: None,
+        absent: None,
         uncertainty: Some(Array2::from_elem((m, 1), NOISE)),
         weights: RowWeights::Shared(vec![1.0 / NOISE; m]),
         reference: None,

@@ -81,6 +81,7 @@ fn inspection() -> Inspection {
             strengths_tried: 30,
         }),
         forecast: Some(Forecast {
+            sweep_peak_bytes: 2_500_000_000,
             peak_bytes: 12_300_000,
             seconds_per_iteration: 2.5e-4,
             bytes_per_pass: 987_650,

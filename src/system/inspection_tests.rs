@@ -11,6 +11,7 @@ fn system() -> System {
         matrix: StoredRows::from_dense(4, 2, &[1.0, 2.0, 3.0, 4.0, 0.0, 0.0, 1.0, 2.0]),
         data: array![[5.0], [11.0], [1.0], [5.0]],
         data_shift: None,
+        absent: None,
         uncertainty: Some(array![[0.5], [0.5], [0.5], [0.5]]),
         weights: RowWeights::Shared(vec![2.0, 2.0, 2.0, 0.0]),
         reference: None,

@@ -15,6 +15,7 @@ fn system(rows: &[Vec<(usize, f64)>], columns: usize, data: Vec<f64>) -> System 
         matrix: StoredRows::from_dense(m, columns, &dense),
         data: Array2::from_shape_vec((m, 1), data).unwrap(),
         data_shift: None,
+        absent: None,
         uncertainty: None,
         weights: RowWeights::Ones,
         reference: None,
