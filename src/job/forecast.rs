@@ -124,7 +124,8 @@ fn probe(matrix: &StoredRows, weights: &RowWeights, system: &System, sets: usize
 fn sample(system: &System) -> (StoredRows, RowWeights) {
     let matrix = &system.matrix;
     let stride = matrix.entries().div_ceil(SAMPLE_ENTRIES);
-    let rows: Vec<usize> = (0..matrix.rows()).filter(|i| i / SAMPLE_ROWS % stride == 0).collect();
+    let rows: Vec<usize> =
+        (0..matrix.rows()).filter(|i| (i / SAMPLE_ROWS).is_multiple_of(stride)).collect();
     let stored = match matrix {
         StoredRows::Double(a) => StoredRows::Double(pick(a, &rows)),
         StoredRows::Single(a) => StoredRows::Single(pick(a, &rows)),
