@@ -26,7 +26,7 @@
 //!
 //! To solve one system from Rust: read it with [`files::matrix::read`] and [`files::vector::read`],
 //! join the parts with [`system::System::assemble`], and hand a [`sweep::Request`] to
-//! [`sweep::run`].
+//! [`sweep::run()`].
 #![deny(unsafe_code)]
 
 pub mod appraise;
