@@ -284,6 +284,23 @@ fn a_dense_decomposition_that_would_not_fit_is_seventy_one() {
     assert!(!place.path("never").exists());
 }
 
+/// One entry can declare four thousand million unknowns: 32 GB for each vector of that length, and
+/// a run needs eight of them, more than any machine this is tested on has free.
+#[test]
+fn unknowns_that_only_a_header_declares_are_refused_before_they_take_memory() {
+    let place = Place::new();
+    let text = "%%MatrixMarket matrix coordinate real general\n2 4000000000 1\n1 7 1.5\n";
+    place.write("a.mtx", text);
+    place.write("b.txt", "1\n2\n");
+    for command in ["solve --strength 1 --out never", "sweep --out never", "inspect"] {
+        let ran = place.expect(71, &format!("{command} --matrix a.mtx --data b.txt"));
+        for part in ["a.mtx", "4000000000 unknowns", "GB", "remedy"] {
+            assert!(ran.err.contains(part), "{part} in {}", ran.err);
+        }
+        assert!(!place.path("never").exists());
+    }
+}
+
 #[test]
 fn a_file_in_the_way_is_seventy_four_before_anything_is_computed() {
     let place = Place::new();

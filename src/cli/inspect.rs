@@ -30,7 +30,7 @@ pub(super) fn run(arguments: JobArguments) -> Result<u8, JobError> {
 }
 
 fn inspect(source: &Source, console: &Console) -> Result<(Inspection, Vec<Warning>), JobError> {
-    let loaded = load::load(source)?;
+    let loaded = load::load(source, 1)?;
     let system = &loaded.system;
     let facts = system.facts();
     // First of all: it starts from what is resident now.

@@ -5,7 +5,6 @@ use std::time::{Duration, Instant};
 use serde_json::{Value, json};
 
 use crate::appraise::misfit;
-use crate::base::complaint::quote;
 use crate::base::{Complaint, Warning};
 use crate::choose::{self, Choice, Curve, Point, Rule};
 use crate::files::Folder;
@@ -13,7 +12,7 @@ use crate::job::load::{self, Loaded};
 use crate::job::rerun::{self, Standing};
 use crate::job::settings::{Command, Settings, StrengthsWanted};
 use crate::job::typed::{MethodName, RuleName, ScalingName};
-use crate::job::{JobError, write};
+use crate::job::{JobError, advice, write};
 use crate::operator::{Operator, Weighted};
 use crate::report::record::Summary;
 use crate::solve::direct::{self, Dense};
@@ -85,7 +84,8 @@ pub fn conduct(
     if let Standing::Same(record) = rerun::standing(&earlier, settings, &inputs)? {
         return Ok(Finished::Before(record));
     }
-    let Loaded { system, start, warnings } = load::load(&settings.source)?;
+    let Loaded { system, start, warnings } =
+        load::load(&settings.source, strengths(settings).count())?;
     let facts = system.facts();
     let load_seconds = begun.elapsed().as_secs_f64();
     let work = Work { settings, system: &system, facts: &facts, start, begun };
@@ -158,7 +158,7 @@ impl<'a> Work<'a> {
                 .map(|set| choice(&run.sets[set], settings.rule, self.known_noise(set)))
                 .collect();
         }
-        self.warn(&mut run);
+        advice::add(&mut run);
         run.solve_seconds = solving.elapsed().as_secs_f64();
         Ok(run)
     }
@@ -185,13 +185,7 @@ impl<'a> Work<'a> {
                 ScalingName::On => Scaling::On,
                 ScalingName::Off => Scaling::Off,
             },
-            strengths: match settings.strengths {
-                StrengthsWanted::One(strength) => Strengths::Given(vec![strength]),
-                StrengthsWanted::Range { range, count } => {
-                    Strengths::between(range.from, range.to, count)
-                }
-                StrengthsWanted::Found { count } => Strengths::Found { count },
-            },
+            strengths: strengths(settings),
             rules: StopRules {
                 gradient_tolerance: settings.gradient_tolerance,
                 residual_tolerance: settings.residual_tolerance,
@@ -308,71 +302,13 @@ impl<'a> Work<'a> {
         let stated = self.settings.source.blocks.iter().all(|block| block.uncertainty.is_some());
         stated.then_some(self.facts.sets[set].data)
     }
-
-    fn warn(&self, run: &mut Run<'_>) {
-        let smallest = run.strengths.iter().copied().fold(f64::INFINITY, f64::min);
-        if let Some(condition) = run.condition.filter(|_| smallest == 0.0) {
-            run.warnings.extend(condition_warning(condition));
-        }
-        let wide = self.system.matrix.rows() < self.system.matrix.columns();
-        if smallest == 0.0 && wide && run.dense.is_none() {
-            run.warnings.push(
-                "Strength 0 with fewer data than unknowns: of all models that fit, the one nearest to the start is found, and on the way the number of iterations acts as the regularisation. `ellbow sweep` looks at strengths above 0.".into(),
-            );
-        }
-        // A start says where to begin, and fixed unknowns say nothing of the others.
-        let stated = self.settings.source.reference.is_some();
-        for (set, facts) in self.facts.sets.iter().enumerate() {
-            if let Some(fit) = facts.constant.as_ref().filter(|fit| fit.share > 0.5)
-                && !stated
-                && smallest > 0.0
-            {
-                let of = if self.facts.sets.len() > 1 {
-                    format!("Data set {}: one", set + 1)
-                } else {
-                    "One".into()
-                };
-                run.warnings.push(format!(
-                    "{of} constant model of {:.6e} {} explains {:.1} % of the data (squared, weighted), but the penalty pulls towards 0: give --reference fit or --reference {:.4e}.",
-                    fit.value, quote(self.system.units.model.as_bytes()), 100.0 * fit.share, fit.value
-                ));
-            }
-        }
-        let penalised = self.system.columns.penalty_weights.as_ref();
-        let unseen = self.facts.empty_columns.len();
-        if unseen > 0 && penalised.is_none() {
-            run.warnings.push(format!(
-                "{unseen} of {} unknowns are touched by no datum: they stay at the reference and mean nothing.",
-                self.system.matrix.columns()
-            ));
-        }
-    }
 }
 
-fn condition_warning(condition: Condition) -> Option<String> {
-    let value = if condition.exact {
-        format!("{:.2e}", condition.value)
-    } else if condition.possible > condition.value {
-        format!("at least {:.2e} and may be {:.2e}", condition.value, condition.possible)
-    } else {
-        format!("at least {:.2e}", condition.value)
-    };
-    if condition.hopeless() {
-        Some(format!(
-            "The system {} singular to working precision: its condition is {value}, beyond 1e13. At strength 0 the model is not determined in double precision and may be wrong in every digit. Scale or centre the columns, remove dependent ones, or use a strength above 0.",
-            if condition.exact || condition.value > sweep::conditioning::CONDITION_MAX {
-                "is"
-            } else {
-                "may be"
-            }
-        ))
-    } else if condition.value > 1e8 {
-        Some(format!(
-            "The condition of the system is {value}: at strength 0 about {:.0} of 16 digits are lost.",
-            condition.value.log10()
-        ))
-    } else {
-        None
+fn strengths(settings: &Settings) -> Strengths {
+    match settings.strengths {
+        StrengthsWanted::One(strength) => Strengths::Given(vec![strength]),
+        StrengthsWanted::Range { range, count } => Strengths::between(range.from, range.to, count),
+        StrengthsWanted::Found { count } => Strengths::Found { count },
     }
 }
 

@@ -11,7 +11,7 @@ use crate::solve::fan::{Fan, Rotations};
 use crate::solve::lsqr::Lsqr;
 use crate::solve::pieces::TrackVectors;
 use crate::solve::{Lane, Problem, Recurrence};
-use crate::sweep::{LANES_MAX, range};
+use crate::sweep::{LANES_MAX, Strengths, range};
 use crate::system::System;
 use crate::system::inspection::Forecast;
 
@@ -27,9 +27,6 @@ const SAMPLE_ENTRIES: usize = 20_000_000;
 /// Rows that stay together in a sample, so that neighbours still share the cache.
 const SAMPLE_ROWS: usize = 256;
 
-/// Strengths of a sweep when none are given.
-const SWEEP_STRENGTHS: usize = 51;
-
 /// Forecasts a solve and a default sweep with LSQR on the calling thread pool. To be called after the system is loaded and its facts
 /// are known, and before anything else takes memory: what is resident now is where a run starts.
 pub fn forecast(system: &System) -> Forecast {
@@ -42,11 +39,27 @@ pub fn forecast(system: &System) -> Forecast {
     let peak = |strengths: usize| already.max(resident + run_bytes(&bare, system, strengths));
     Forecast {
         peak_bytes: peak(1),
-        sweep_peak_bytes: peak(SWEEP_STRENGTHS),
+        sweep_peak_bytes: peak(Strengths::Found { count: None }.count()),
         seconds_per_iteration: seconds,
         bytes_per_pass,
         bandwidth_bytes_per_second: bytes_per_pass as f64 / seconds,
     }
+}
+
+/// What facts, blocks, tracks and results take at the very least, from the sizes alone. Saturates.
+pub fn least_bytes(rows: usize, columns: usize, sets: usize, strengths: usize) -> u64 {
+    let of = |length: usize, vectors: usize| {
+        8u64.saturating_mul(length as u64).saturating_mul(vectors as u64)
+    };
+    let lanes = sets.min(LANES_MAX);
+    let tracks = strengths.saturating_mul(lanes);
+    let models = sets.saturating_mul(strengths);
+    // Facts keep three vectors of either length; u; v and s; two vectors a track; all results.
+    let iterating = of(rows, 3 + lanes)
+        .saturating_add(of(columns, 3 + 2 * lanes))
+        .saturating_add(of(columns, 2 * tracks));
+    let results = of(rows, models).saturating_add(of(columns, models));
+    iterating.max(results)
 }
 
 /// Bytes that a run of LSQR takes on top of the loaded system, at its peak.

@@ -5,12 +5,12 @@ use std::path::Path;
 use ndarray::Array2;
 
 use crate::base::grid::{Axis, Grid};
-use crate::base::{Complaint, Warning};
+use crate::base::{Complaint, Warning, memory};
 use crate::files::vector::NonFinite;
 use crate::files::{self, matrix::ReadOptions};
-use crate::job::JobError;
 use crate::job::settings::{ReferenceSource, Source, UncertaintySource};
 use crate::job::typed::{Duplicates, GridTable, Missing, Precision};
+use crate::job::{JobError, forecast};
 use crate::operator;
 use crate::report::record::InputRecord;
 use crate::system::{BlockPart, Linearisation, Parts, Reference, System, Uncertainty};
@@ -23,13 +23,15 @@ pub struct Loaded {
     pub warnings: Vec<Warning>,
 }
 
-/// Reads and checks everything the settings name.
+/// Reads and checks everything the settings name, for a run at this many strengths.
 ///
 /// # Errors
-/// A file that cannot be read or is at fault; parts that do not fit each other.
-pub fn load(source: &Source) -> Result<Loaded, JobError> {
+/// A file that cannot be read or is at fault; parts that do not fit each other; vectors that
+/// would not fit in memory.
+pub fn load(source: &Source, strengths: usize) -> Result<Loaded, JobError> {
     let mut reader = Reader { source, warnings: Vec::new() };
     let blocks = reader.blocks()?;
+    refuse_too_large(&blocks, strengths)?;
     let rows: usize = blocks.iter().map(|block| block.matrix.rows()).sum();
     let columns = blocks[0].matrix.columns();
     let row_table = match &source.rows {
@@ -97,6 +99,33 @@ pub fn identities(source: &Source) -> Result<Vec<InputRecord>, JobError> {
             })
         })
         .collect()
+}
+
+/// A small file can declare billions of unknowns: better refused now than ended by the system.
+fn refuse_too_large(blocks: &[BlockPart], strengths: usize) -> Result<(), JobError> {
+    let rows: usize = blocks.iter().map(|block| block.matrix.rows()).sum();
+    let columns = blocks[0].matrix.columns();
+    let sets = blocks[0].data.ncols();
+    let needed = forecast::least_bytes(rows, columns, sets, strengths);
+    match memory::available_bytes() {
+        Some(available) if needed > available => {
+            let gigabytes = |bytes: u64| format!("{:.1} GB", bytes as f64 / 1e9);
+            Err(JobError::TooLarge(
+                Complaint::new(
+                    format!(
+                        "vectors for {rows} data and {columns} unknowns at {strengths} strengths need at \
+                         least {} and {} are free",
+                        gigabytes(needed),
+                        gigabytes(available)
+                    ),
+                    "check the size that the matrix declares; ask for fewer strengths \
+                     (--strength-count) or fewer data sets at a time, or use a larger machine",
+                )
+                .in_file(&blocks[0].matrix_path),
+            ))
+        }
+        _ => Ok(()),
+    }
 }
 
 fn checked_start(

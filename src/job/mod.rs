@@ -1,5 +1,6 @@
 //! One job from settings to files: load, check, sweep, choose, appraise, write.
 
+mod advice;
 pub mod conduct;
 pub mod demo;
 pub mod forecast;

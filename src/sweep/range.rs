@@ -21,6 +21,14 @@ pub enum Strengths {
 }
 
 impl Strengths {
+    /// How many there are, or will be once they are found.
+    pub fn count(&self) -> usize {
+        match self {
+            Self::Given(list) => list.len(),
+            Self::Found { count } => count.unwrap_or_else(|| spaced(1.0, SPAN, None).len()),
+        }
+    }
+
     /// `count` strengths from `from` to `to`, evenly in log λ, descending; [`PER_DECADE`] a
     /// decade when no count is given.
     ///
