@@ -1,5 +1,6 @@
 //! Ellbow
 #![deny(unsafe_code)]
+#![warn(missing_docs)]
 pub mod appraise;
 pub mod base;
 pub mod choose;

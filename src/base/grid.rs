@@ -10,7 +10,9 @@ use crate::base::Complaint;
 /// One axis: `cells` cells of width `spacing`, the outer border of the first at `origin`.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct Axis {
+    /// e.g. `x`; not empty, and no other axis has it.
     pub name: String,
+    /// At least 1.
     pub cells: usize,
     /// Cell width in the grid's unit; positive.
     pub spacing: f64,
@@ -18,6 +20,7 @@ pub struct Axis {
     pub origin: f64,
 }
 
+/// A rectangular grid of cells, some of them unknowns.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct Grid {
     /// As listed by the user, one to three.

@@ -98,6 +98,7 @@ impl Folder {
         Ok(folder)
     }
 
+    /// As given to the constructor.
     pub fn path(&self) -> &Path {
         &self.path
     }

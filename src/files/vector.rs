@@ -13,7 +13,9 @@ use crate::base::Complaint;
 /// What is done about NaN and infinite values.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 pub enum NonFinite {
+    /// They are an error.
     Refuse,
+    /// They are read as they stand.
     Keep,
 }
 

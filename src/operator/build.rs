@@ -28,6 +28,7 @@ pub struct RowCounts {
 }
 
 impl RowCounts {
+    /// No entries yet in any of `rows` rows: 8 bytes a row.
     pub fn new(rows: usize) -> Self {
         let zeros = vec![0usize; rows + 1];
         Self { counts: zeros.into_iter().map(AtomicUsize::new).collect() }
@@ -58,10 +59,12 @@ pub struct RunCounter<'a> {
 }
 
 impl<'a> RunCounter<'a> {
+    /// Counts into `counts`; what is pending is added when the counter is dropped.
     pub fn new(counts: &'a RowCounts) -> Self {
         Self { counts, row: 0, times: 0 }
     }
 
+    /// Counts one entry. Panics, then or later, if the row is out of range.
     #[inline]
     pub fn add(&mut self, row: usize) {
         if row != self.row {
@@ -144,6 +147,7 @@ impl<V: Keep> Buckets<V> {
 }
 
 impl<V: Keep> Scatter<V> {
+    /// The final arrays for what was counted, zeroed; 4 bytes and a value an entry, 8 bytes a row.
     pub fn new(counts: RowCounts, columns: usize) -> Self {
         let (next, total) = counts.into_starts();
         let cuts = cut_rows(&next, total);
@@ -234,6 +238,7 @@ pub struct Feeder<V> {
 }
 
 impl<V: Keep> Feeder<V> {
+    /// As [`Scatter::new`], with an empty batch.
     pub fn new(counts: RowCounts, columns: usize) -> Self {
         let scatter = Scatter::new(counts, columns);
         let first_rows = scatter.first_rows();

@@ -4,6 +4,8 @@
 
 use crate::operator::{Frame, Operator, Pass, Scratch, Weighted};
 
+/// [W A; λ P] D over a borrowed W A D: u has m + n rows. A pass costs one of W A D and 40 bytes an
+/// unknown and lane.
 pub struct Stacked<'a> {
     top: &'a Weighted<'a>,
     /// p, one factor per unknown; `None` means 1.

@@ -55,6 +55,7 @@ struct LaneState {
     packed: Option<Vec<f64>>,
 }
 
+/// CGLS on blocks of lanes, one strength a lane: six blocks (u and b̃ of m rows, p, t, g, y of n).
 pub struct Cgls<'a> {
     problem: &'a Problem<'a>,
     operator: Box<dyn Operator + 'a>,

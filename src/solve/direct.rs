@@ -21,6 +21,7 @@ pub struct Dense {
     pub singular_values: Vec<f64>,
     /// max(m, n) · ε · σ₁: a smaller σ counts as zero.
     pub rank_tolerance: f64,
+    /// Number of σ above `rank_tolerance`.
     pub rank: usize,
 }
 

@@ -14,6 +14,7 @@ use crate::solve::Estimate;
 use crate::solve::fan::Rotations;
 use crate::solve::pieces::PIECE_ROWS;
 
+/// Scalars of one track of LSQR; two vectors: y, w.
 pub struct Lsqr {
     lambda: f64,
     phi_bar: f64,

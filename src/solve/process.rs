@@ -18,6 +18,7 @@ pub struct Process {
 /// The trade-off curve at one λ, from the projected problem.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub struct CurvePoint {
+    /// λ.
     pub strength: f64,
     /// ρ.
     pub residual_norm: f64,
