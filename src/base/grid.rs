@@ -38,8 +38,8 @@ impl Grid {
     ///
     /// # Errors
     /// No or more than three axes, an axis without cells, a spacing that is not positive and
-    /// finite, an origin that is not finite, axis names that are empty or repeat, a middle axis as the fastest, a cell number
-    /// out of range or repeated.
+    /// finite, an origin that is not finite, axis names that are empty or repeat, a middle axis as
+    /// the fastest, a cell number out of range or repeated.
     pub fn new(
         axes: Vec<Axis>,
         unit: String,

@@ -80,7 +80,8 @@ pub enum Verdict {
     Agreed,
     /// They do not.
     Divided,
-    /// They lie more than a factor of [`UNDETERMINED_FACTOR`] apart, sit on an edge, or none applies.
+    /// They lie more than a factor of [`UNDETERMINED_FACTOR`] apart, only one applies or none, or
+    /// the decisive one sits on an edge.
     Undetermined,
 }
 
@@ -112,7 +113,8 @@ pub struct Choice {
 }
 
 /// Applies every rule; `wanted` makes one decisive. Else the noise level is where σ is stated, then
-/// the curvature corner, then the pruned one: on test problems a corner was within twice the best error less often.
+/// the curvature corner, then the pruned one: on test problems a corner was within twice the best
+/// error less often.
 ///
 /// Panics on a sweep without points.
 pub fn choose(curve: &Curve<'_>, wanted: Option<Rule>) -> Choice {

@@ -30,8 +30,9 @@ const SAMPLE_ROWS: usize = 256;
 /// Strengths of a sweep when none are given.
 const SWEEP_STRENGTHS: usize = 51;
 
-/// Forecasts a solve and a default sweep with LSQR on the calling thread pool. To be called after the system is loaded and its facts
-/// are known, and before anything else takes memory: what is resident now is where a run starts.
+/// Forecasts a solve and a default sweep with LSQR on the calling thread pool. To be called after
+/// the system is loaded and its facts are known, and before anything else takes memory: what is
+/// resident now is where a run starts.
 pub fn forecast(system: &System) -> Forecast {
     let resident = memory::resident_bytes().unwrap_or(0);
     let already = memory::peak_bytes().unwrap_or(0);
@@ -124,7 +125,8 @@ fn probe(matrix: &StoredRows, weights: &RowWeights, system: &System, sets: usize
 fn sample(system: &System) -> (StoredRows, RowWeights) {
     let matrix = &system.matrix;
     let stride = matrix.entries().div_ceil(SAMPLE_ENTRIES);
-    let rows: Vec<usize> = (0..matrix.rows()).filter(|i| i / SAMPLE_ROWS % stride == 0).collect();
+    let rows: Vec<usize> =
+        (0..matrix.rows()).filter(|i| (i / SAMPLE_ROWS).is_multiple_of(stride)).collect();
     let stored = match matrix {
         StoredRows::Double(a) => StoredRows::Double(pick(a, &rows)),
         StoredRows::Single(a) => StoredRows::Single(pick(a, &rows)),

@@ -2,9 +2,9 @@
 //!
 //! 1. [`RowCounts`]: a first run over the entries counts them per row (any number of threads).
 //! 2. [`Scatter`]: a second run puts each entry at its place in the final arrays. Entries come in
-//!    batches; each batch is sorted into [`Buckets`] by range of rows, and the ranges are then filled
-//!    in parallel, each going through the batch in order, so that file order within a row is kept
-//!    for any number of threads.
+//!    batches; each batch is sorted into [`Buckets`] by range of rows, and the ranges are then
+//!    filled in parallel, each going through the batch in order, so that file order within a row is
+//!    kept for any number of threads.
 //! 3. [`crate::operator::settle`]: rows are sorted by column and repeated entries merged.
 //!
 //! Peak memory: the final arrays (12, 8 or 4 bytes an entry and 8 a row) and one batch.

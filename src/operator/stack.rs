@@ -1,4 +1,4 @@
-//! [W A; λ P] D with P = diag(p): a matrix over penalty rows, the strength λ a property of the lane.
+//! [W A; λ P] D with P = diag(p): a matrix over penalty rows; each lane has its own λ.
 //!
 //! Used where a start model or a column scaling rules out carrying λ as a shift.
 

@@ -229,7 +229,7 @@ fn short(value: f64) -> String {
     if value == 0.0 { "0".into() } else { format!("{value:.4e}") }
 }
 
-/// Breaks text into lines of at most [`WIDTH`] columns; the first begins with `first`, the others
+/// Breaks text into lines of at most `WIDTH` columns; the first begins with `first`, the others
 /// are indented as far. Line breaks of the text are kept.
 pub fn wrap(out: &mut String, first: &str, text: &str) {
     let indent = " ".repeat(first.chars().count());

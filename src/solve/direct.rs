@@ -28,7 +28,7 @@ pub struct Dense {
 /// Multiplications that the decomposition is allowed to cost when nobody asked for it.
 const CHEAP: f64 = 1e8;
 
-/// Numbers in the dense array of such a decomposition: 8 MB, and as much again twice for its factors.
+/// Numbers in the dense array of such a decomposition: 8 MB, and its factors twice as much.
 const CHEAP_NUMBERS: usize = 1_000_000;
 
 /// Numbers in the dense array that `--method direct` accepts: 160 MB.

@@ -378,7 +378,7 @@ impl Run<'_, '_> {
 }
 
 /// Recomputed norms have the last word on why a track stopped. `step_norm` is ‖y‖: rounding and
-/// gradient are compared in the operator's own variables, where the columns may have been evened out.
+/// gradient are compared in the operator's own variables, where columns may have been scaled.
 fn resolve(track: &TrackState, step_norm: f64, certified: Certified, rules: &StopRules) -> Solved {
     let Certified { mut solved, relative_gradient_in_steps: relative } = certified;
     let rounding = track.rounding_fixed + rounding_of_residual(track.frobenius, step_norm, 0.0);

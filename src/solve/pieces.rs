@@ -16,7 +16,7 @@ pub fn count(n: usize) -> usize {
 
 /// Calls `work(target piece, source piece, sums of the piece)` for all pieces of two n×k blocks.
 ///
-/// `sums` holds the same count of numbers for every piece, a multiple of k; each piece writes its own.
+/// `sums` holds the same count of numbers for every piece, a multiple of k; each writes its own.
 pub fn for_each(
     k: usize,
     target: &mut [f64],

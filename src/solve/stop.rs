@@ -105,8 +105,8 @@ impl StopRules {
     /// Default of `residual_tolerance`: rounding level only.
     pub const RESIDUAL_TOLERANCE: f64 = 0.0;
 
-    /// Twenty times the smaller side, between 1,000 and 20,000: ill-conditioned survey systems need about
-    /// eleven times the smaller side at λ = 0 (illc1033: 3,700 iterations for 320 unknowns).
+    /// Twenty times the smaller side, between 1,000 and 20,000: ill-conditioned survey systems need
+    /// about eleven times the smaller side at λ = 0 (illc1033: 3,700 iterations for 320 unknowns).
     pub fn max_iterations_default(rows: usize, columns: usize) -> u64 {
         (20 * rows.min(columns) as u64).clamp(1_000, 20_000)
     }

@@ -11,8 +11,8 @@ pub const CONDITION_MAX: f64 = 1e13;
 pub struct Condition {
     /// What is known of it: the condition itself where `exact`.
     pub value: f64,
-    /// From a dense decomposition; otherwise from the process, which can only miss small singular values: the
-    /// true condition is at least this.
+    /// From a dense decomposition; otherwise from the process, which can only miss small singular
+    /// values: the true condition is at least this.
     pub exact: bool,
     /// As high as it may be, as far as one can tell; `value` where nothing else is known.
     pub possible: f64,

@@ -46,7 +46,7 @@ pub struct Facts {
     pub duplicate_rows: Vec<DuplicateRows>,
     /// Classes of equal columns: the data cannot tell their unknowns apart.
     pub duplicate_columns: Vec<Vec<usize>>,
-    /// Rows without entries whose datum counts and is not 0, in any data set: no model explains them.
+    /// Rows without entries whose datum counts and is not 0, in any data set: beyond any model.
     pub unexplainable_rows: Vec<usize>,
     /// One for each data set.
     pub sets: Vec<SetFacts>,
@@ -102,7 +102,7 @@ pub struct ConstantFit {
     pub reciprocal: f64,
     /// Share of ‖Wb‖² (less what fixed unknowns contribute) that it explains, 0 to 1.
     pub share: f64,
-    /// Standard deviation of the value if the weights are 1/σ and the model is constant; model unit.
+    /// Standard deviation of the value, model unit, if weights are 1/σ and the model is constant.
     pub deviation: f64,
 }
 

@@ -43,7 +43,8 @@ pub struct System {
     pub data: Array2<f64>,
     /// m×k: no datum was given (NaN, or not finite in a row left out); `None` if all were.
     pub absent: Option<Array2<bool>>,
-    /// Added to `data` gives the data as read (g(x_k) − A x_k); `None` without a linearisation point. Length m.
+    /// Added to `data` gives the data as read (g(x_k) − A x_k); `None` without a linearisation
+    /// point. Length m.
     pub data_shift: Option<Vec<f64>>,
     /// σ in data units, m×1 or m×k; `None` if the user gave none. Unchecked where a datum does
     /// not count.
@@ -112,7 +113,8 @@ pub struct RowTable {
 pub struct ColumnTable {
     /// Names of the unknowns for messages.
     pub names: Option<Vec<String>>,
-    /// e.g. `cell`, `station`; with a grid, unknowns of kind `cell` (or of no kind) are its cells in order.
+    /// e.g. `cell`, `station`; with a grid, unknowns of kind `cell` (or of no kind) are its cells
+    /// in order.
     pub kinds: Option<Vec<String>>,
     /// Factor on the penalty of each unknown, not negative; absent means 1.
     pub penalty_weights: Option<Vec<f64>>,
@@ -123,7 +125,8 @@ pub struct ColumnTable {
 /// How σ was given.
 #[derive(Debug, Clone, PartialEq)]
 pub enum Uncertainty {
-    /// √(absolute² + (percent/100·|b|)²), data units. `2%` is (0, 2), `0.5` is (0.5, 0), `0.5+2%` is (0.5, 2).
+    /// √(absolute² + (percent/100·|b|)²), data units. `2%` is (0, 2), `0.5` is (0.5, 0), `0.5+2%`
+    /// is (0.5, 2).
     Formula {
         /// Data unit.
         absolute: f64,
