@@ -28,6 +28,7 @@
 //! join the parts with [`system::System::assemble`], and hand a [`sweep::Request`] to
 //! [`sweep::run()`].
 #![deny(unsafe_code)]
+#![warn(missing_docs)]
 
 pub mod appraise;
 pub mod base;

@@ -2,7 +2,8 @@
 
 /// χ²/(m − tr H) = ‖W(b − Ax)‖²/(m − tr H), with m data of positive weight.
 ///
-/// `None` where no degree of freedom is left: the model has as many parameters as there are data, to rounding.
+/// `None` where no degree of freedom is left: the model has as many parameters as there are data,
+/// to rounding.
 pub fn chi_square_per_dof(
     residual_norm: f64,
     data: usize,

@@ -14,24 +14,31 @@ pub const QUOTE_CHARACTERS_MAX: usize = 200;
 /// line of its own.
 #[derive(Debug, Clone, PartialEq, Eq)]
 pub struct Complaint {
+    /// File at fault, if it is one.
     pub path: Option<PathBuf>,
     /// Line in the file, from 1.
     pub line: Option<u64>,
+    /// What is wrong.
     pub cause: String,
+    /// Offending text, escaped and cut.
     pub text: Option<String>,
+    /// What to do about it.
     pub remedy: String,
 }
 
 impl Complaint {
+    /// Without file, line and text.
     pub fn new(cause: impl Into<String>, remedy: impl Into<String>) -> Self {
         Self { path: None, line: None, cause: cause.into(), text: None, remedy: remedy.into() }
     }
 
+    /// Names the file, in place of one named before.
     pub fn in_file(mut self, path: impl AsRef<Path>) -> Self {
         self.path = Some(path.as_ref().to_path_buf());
         self
     }
 
+    /// Names the line, from 1.
     pub fn at_line(mut self, line: u64) -> Self {
         self.line = Some(line);
         self

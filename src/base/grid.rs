@@ -10,7 +10,9 @@ use crate::base::Complaint;
 /// One axis: `cells` cells of width `spacing`, the outer border of the first at `origin`.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct Axis {
+    /// e.g. `x`; not empty, and no other axis has it.
     pub name: String,
+    /// At least 1.
     pub cells: usize,
     /// Cell width in the grid's unit; positive.
     pub spacing: f64,
@@ -18,6 +20,7 @@ pub struct Axis {
     pub origin: f64,
 }
 
+/// A rectangular grid of cells, some of them unknowns.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct Grid {
     /// As listed by the user, one to three.
@@ -35,8 +38,8 @@ impl Grid {
     ///
     /// # Errors
     /// No or more than three axes, an axis without cells, a spacing that is not positive and
-    /// finite, an origin that is not finite, axis names that are empty or repeat, a middle axis as the fastest, a cell number
-    /// out of range or repeated.
+    /// finite, an origin that is not finite, axis names that are empty or repeat, a middle axis as
+    /// the fastest, a cell number out of range or repeated.
     pub fn new(
         axes: Vec<Axis>,
         unit: String,

@@ -17,11 +17,13 @@ pub struct Stream {
 }
 
 impl Stream {
+    /// Streams of different numbers under one seed are independent for all that a test can tell.
     pub fn new(seed: u64, stream: u64) -> Self {
         let golden = 0x9e37_79b9_7f4a_7c15_u64;
         Self { key: mix(mix(seed.wrapping_add(golden)) ^ stream.wrapping_mul(golden)) }
     }
 
+    /// 64 bits that depend on seed, stream and `index` alone, so that any order of calls will do.
     pub fn bits(&self, index: u64) -> u64 {
         mix(self.key.wrapping_add(index.wrapping_mul(0x9e37_79b9_7f4a_7c15)))
     }

@@ -1,12 +1,12 @@
-//! `corner`: the point of largest curvature of the L-curve (ln ‖r‖, ln ‖P(x − x_ref)‖), continuous in λ.
+//! `corner`: the point of largest curvature of the L-curve (ln ‖r‖, ln ‖P(x − x_ref)‖) over all λ.
 //!
 //! With ρ, η the *squared* norms and η' = dη/dλ:
 //!
 //! κ = 2 (ρ η/|η'|) · (λ² η' ρ + 2 λ η ρ + λ⁴ η η') / (λ⁴ η² + ρ²)^{3/2}
 //!
-//! Sources: Hansen, SIAM Review 34:561, 1992; Hansen & O'Leary, SISC 14:1487, 1993. A corner tends to under-smooth, moves with the
-//! axes and does not converge as the noise vanishes (Vogel, Inverse Problems 12:535, 1996): it is a
-//! witness, not a proof.
+//! Sources: Hansen, SIAM Review 34:561, 1992; Hansen & O'Leary, SISC 14:1487, 1993. A corner tends
+//! to under-smooth, moves with the axes and does not converge as the noise vanishes (Vogel, Inverse
+//! Problems 12:535, 1996): it is a witness, not a proof.
 
 use crate::choose::{Curve, Rule, RuleResult};
 use crate::solve::Process;

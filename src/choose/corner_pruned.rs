@@ -1,8 +1,10 @@
 //! `corner-pruned`: the corner of the discrete L-curve by adaptive pruning.
 //!
 //! Many points and small wiggles hide a corner, so the curve is looked at with only its p longest
-//! segments, p growing; each view proposes corners by the sharpest angle and by the overall shape (the point nearest to where the flat and the
-//! steep part would meet), and the candidates are judged against each other at the end.
+//! segments, p growing; each view proposes corners by the sharpest angle and by the overall shape
+//! (the point nearest to where the flat and the steep part would meet), and the candidates are
+//! judged against each other at the end.
+//!
 //! Source: Hansen, Jensen & Rodriguez, J. Comput. Appl. Math. 198:483, 2007.
 
 use crate::choose::{Curve, Rule, RuleResult};

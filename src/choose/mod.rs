@@ -15,11 +15,13 @@ use crate::solve::Process;
 /// One point of the trade-off curve.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub struct Point {
+    /// λ.
     pub strength: f64,
     /// ρ, not squared.
     pub residual_norm: f64,
     /// η, not squared.
     pub penalty_norm: f64,
+    /// [`crate::solve::Stop::converged`] of the track.
     pub converged: bool,
 }
 

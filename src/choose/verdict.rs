@@ -5,15 +5,20 @@ use crate::choose::corner_pruned::corner_pruned;
 use crate::choose::noise_plain::noise_plain;
 use crate::choose::{Curve, Point};
 
+/// A rule that chooses a strength.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize, serde::Deserialize)]
 #[serde(rename_all = "kebab-case")]
 pub enum Rule {
+    /// Largest curvature of the L-curve (ln ρ², ln η²), from the scalars of a fan.
     Corner,
+    /// Corner of the discrete L-curve by adaptive pruning, from ρ and η alone.
     CornerPruned,
+    /// Discrepancy principle without degrees of freedom: ρ² = m, σ stated.
     NoisePlain,
 }
 
 impl Rule {
+    /// The word in settings and records.
     pub fn word(self) -> &'static str {
         match self {
             Self::Corner => "corner",
@@ -26,10 +31,13 @@ impl Rule {
 /// One rule's view.
 #[derive(Debug, Clone, PartialEq, serde::Serialize, serde::Deserialize)]
 pub struct RuleResult {
+    /// Whose view.
     pub rule: Rule,
     /// The rule's own strength, not rounded to the sweep's; `None` where it does not apply.
     pub strength: Option<f64>,
+    /// Whether the rule says anything on this sweep; `note` says why not.
     pub applicable: bool,
+    /// `strength` is an end of the sweep, so the rule may want one beyond it.
     pub at_edge: bool,
     /// Why it does not apply, or what to mind.
     pub note: String,
@@ -39,6 +47,7 @@ pub struct RuleResult {
 }
 
 impl RuleResult {
+    /// The rule applies and chooses `strength`, inside the range.
     pub fn at(rule: Rule, strength: f64) -> Self {
         Self {
             rule,
@@ -50,6 +59,7 @@ impl RuleResult {
         }
     }
 
+    /// The rule does not apply, for the reason in `note`.
     pub fn not_applicable(rule: Rule, note: &str) -> Self {
         Self {
             rule,
@@ -62,6 +72,7 @@ impl RuleResult {
     }
 }
 
+/// How far the rules agree.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize, serde::Deserialize)]
 #[serde(rename_all = "kebab-case")]
 pub enum Verdict {
@@ -69,7 +80,8 @@ pub enum Verdict {
     Agreed,
     /// They do not.
     Divided,
-    /// They lie more than a factor of [`UNDETERMINED_FACTOR`] apart, sit on an edge, or none applies.
+    /// They lie more than a factor of [`UNDETERMINED_FACTOR`] apart, only one applies or none, or
+    /// the decisive one sits on an edge.
     Undetermined,
 }
 
@@ -88,16 +100,21 @@ pub struct Choice {
     /// Its place in the sweep.
     #[serde(skip)]
     pub place: usize,
+    /// The decisive rule; `None` where no rule applies.
     pub rule: Option<Rule>,
+    /// Every rule's view, in the order in which they would decide.
     pub rules: Vec<RuleResult>,
     /// log₁₀ of the largest over the smallest strength of the rules that apply.
     pub spread_decades: f64,
+    /// By the rules that apply, the decisive one or not.
     pub verdict: Verdict,
+    /// Sentences behind the choice and the verdict, for the reader of a report.
     pub reasons: Vec<String>,
 }
 
 /// Applies every rule; `wanted` makes one decisive. Else the noise level is where σ is stated, then
-/// the curvature corner, then the pruned one: on test problems a corner was within twice the best error less often.
+/// the curvature corner, then the pruned one: on test problems a corner was within twice the best
+/// error less often.
 ///
 /// Panics on a sweep without points.
 pub fn choose(curve: &Curve<'_>, wanted: Option<Rule>) -> Choice {

@@ -16,7 +16,7 @@ use crate::job::{JobError, Typed};
 use crate::{files, team};
 
 /// Exit codes, as the guide lists them.
-pub mod exit {
+mod exit {
     pub const CONVERGED: u8 = 0;
     pub const USAGE: u8 = 2;
     pub const NOT_CONVERGED: u8 = 3;

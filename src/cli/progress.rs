@@ -100,7 +100,7 @@ impl Watch for Console {
     }
 }
 
-/// How far the relative gradient has come from its first value to the tolerance, in orders of magnitude.
+/// How far the relative gradient has come from its first value to the tolerance, in decades.
 fn done_share(first: f64, now: f64, tolerance: f64) -> f64 {
     let target = tolerance.max(f64::EPSILON);
     if !(first > target && now > 0.0) {

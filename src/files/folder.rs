@@ -98,6 +98,7 @@ impl Folder {
         Ok(folder)
     }
 
+    /// As given to the constructor.
     pub fn path(&self) -> &Path {
         &self.path
     }
@@ -128,7 +129,7 @@ impl Folder {
     ///
     /// # Errors
     /// The system refuses; an earlier version is then untouched, unless only the last step failed
-    /// (syncing the folder), when the new version is in place but might not survive a power failure.
+    /// (syncing the folder), when the new version is in place but may not survive a power cut.
     pub fn write(&self, name: &str, content: &[u8]) -> Result<(), FileError> {
         self.write_with(name, |out| out.write_all(content))
     }
@@ -180,7 +181,7 @@ impl Folder {
 
     /// Writes an array of f64 in C order as .npy, version 1.
     ///
-    /// Panics as [`Folder::place`], or if the shape does not have as many places as there are values.
+    /// Panics as [`Folder::place`], or if the shape has not as many places as there are values.
     ///
     /// # Errors
     /// As [`Folder::write`].

@@ -8,6 +8,7 @@ use super::FileError;
 /// Length and content of a file.
 #[derive(Debug, Clone, PartialEq, Eq, serde::Serialize, serde::Deserialize)]
 pub struct Identity {
+    /// Length of the file, compressed if it is.
     pub bytes: u64,
     /// BLAKE3 of the content, 64 hexadecimal digits.
     pub checksum: String,

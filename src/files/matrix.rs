@@ -22,8 +22,8 @@ pub struct ReadOptions {
 const ACCEPTED: &str = "a Matrix Market file (it begins with %%MatrixMarket; also gzip), a sparse \
     matrix saved by SciPy (.npz) or a two-dimensional array (.npy)";
 
-/// Reads a matrix: Matrix Market coordinate or array (also gzip), SciPy's .npz (CSR, CSC, COO), or a
-/// two-dimensional .npy, whose zeros are not kept.
+/// Reads a matrix: Matrix Market coordinate or array (also gzip), SciPy's .npz (CSR, CSC, COO), or
+/// a two-dimensional .npy, whose zeros are not kept.
 ///
 /// Peak anonymous memory is at most 24 bytes an entry, 12 for a pattern; mapped pages not counted.
 /// The result does not depend on the number of threads.

@@ -7,7 +7,7 @@
 mod complain;
 mod dense;
 mod dtype;
-pub mod folder;
+mod folder;
 pub mod identity;
 pub mod job_file;
 pub mod matrix;
@@ -38,7 +38,14 @@ pub enum FileError {
     BadInput(Complaint),
     /// The system refused (exit code 74).
     #[error("{}: could not {doing}: {source}", show(.path))]
-    Io { path: PathBuf, doing: &'static str, source: io::Error },
+    Io {
+        /// The file or folder.
+        path: PathBuf,
+        /// What was tried, to stand after "could not".
+        doing: &'static str,
+        /// The system's words.
+        source: io::Error,
+    },
 }
 
 impl FileError {
@@ -62,9 +69,11 @@ impl FileError {
 /// What was read, and what should be known about it.
 #[derive(Debug)]
 pub struct Loaded<T> {
+    /// The content.
     pub value: T,
     /// Each names the file.
     pub warnings: Vec<Warning>,
+    /// Format, size and counts, for a record.
     pub facts: Facts,
 }
 

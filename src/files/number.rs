@@ -68,7 +68,7 @@ pub fn whole(token: &[u8]) -> Whole {
 /// Longest run of digits that cannot overflow u64.
 const DIGITS_QUICK: usize = 18;
 
-/// Digits at the start of `bytes`: their value and their number; `None` where the slow way must look.
+/// Digits at the start of `bytes`: value and number; `None` where the slow way must look.
 #[inline(always)]
 pub fn quick_whole(bytes: &[u8]) -> Option<(u64, usize)> {
     let mut value = 0u64;

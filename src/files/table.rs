@@ -40,7 +40,7 @@ pub fn read_rows(path: &Path, rows: usize) -> Result<RowTable, FileError> {
 ///
 /// # Errors
 /// The file cannot be read or is no table; it has another number of lines or an unknown heading; a
-/// name is empty or repeats; a penalty weight is negative; a number is not finite; a bound is given.
+/// name is empty or repeats; a penalty weight is negative; a number is not finite; it has bounds.
 pub fn read_columns(path: &Path, columns: usize) -> Result<ColumnTable, FileError> {
     let table = Table::read(path, columns, "columns")?;
     let mut result = ColumnTable::default();

@@ -13,7 +13,9 @@ use crate::base::Complaint;
 /// What is done about NaN and infinite values.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 pub enum NonFinite {
+    /// They are an error.
     Refuse,
+    /// They are read as they stand.
     Keep,
 }
 
@@ -22,8 +24,8 @@ const ACCEPTED: &str = "an array (.npy), a Matrix Market array (.mtx), or column
 
 /// Reads values × data sets: m×k, a one-dimensional file as m×1.
 ///
-/// Formats, told by content: .npy of one or two dimensions; Matrix Market array, or n×1 coordinate in
-/// which a missing entry is 0; text columns. Text may be gzip.
+/// Formats, told by content: .npy of one or two dimensions; Matrix Market array, or n×1 coordinate
+/// in which a missing entry is 0; text columns. Text may be gzip.
 ///
 /// # Errors
 /// The file cannot be read; it breaks its format; it holds no values; a value is not finite and

@@ -23,6 +23,7 @@ use crate::team::Threads;
 
 /// How a job ended.
 pub enum Finished {
+    /// It ran; the record of what was written.
     New(Box<Summary>),
     /// The folder held the finished result of the same command.
     Before(Box<Value>),

@@ -12,7 +12,9 @@ use crate::job::{JobError, Settings};
 
 /// One problem and its files.
 pub struct Problem {
+    /// What `ellbow demo` is given.
     pub name: &'static str,
+    /// What is measured, in one line.
     pub about: &'static str,
     /// What a reader must be told wherever the result is shown.
     pub caution: &'static str,
@@ -37,6 +39,8 @@ pub const PROBLEMS: [Problem; 1] = [Problem {
     ),
 }];
 
+/// The problem of that name.
+///
 /// # Errors
 /// There is no problem of that name; the message lists those there are.
 pub fn find(name: &str) -> Result<&'static Problem, JobError> {

@@ -27,8 +27,9 @@ const SAMPLE_ENTRIES: usize = 20_000_000;
 /// Rows that stay together in a sample, so that neighbours still share the cache.
 const SAMPLE_ROWS: usize = 256;
 
-/// Forecasts a solve and a default sweep with LSQR on the calling thread pool. To be called after the system is loaded and its facts
-/// are known, and before anything else takes memory: what is resident now is where a run starts.
+/// Forecasts a solve and a default sweep with LSQR on the calling thread pool. To be called after
+/// the system is loaded and its facts are known, and before anything else takes memory: what is
+/// resident now is where a run starts.
 pub fn forecast(system: &System) -> Forecast {
     let resident = memory::resident_bytes().unwrap_or(0);
     let already = memory::peak_bytes().unwrap_or(0);

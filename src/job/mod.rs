@@ -1,16 +1,16 @@
 //! One job from settings to files: load, check, sweep, choose, appraise, write.
 
 mod advice;
-pub mod conduct;
-pub mod demo;
-pub mod forecast;
-pub mod load;
-pub mod quick_fit;
-pub mod rerun;
-pub mod settings;
+mod conduct;
+pub(crate) mod demo;
+mod forecast;
+pub(crate) mod load;
+mod quick_fit;
+mod rerun;
+pub(crate) mod settings;
 pub mod typed;
-pub mod words;
-pub mod write;
+mod words;
+mod write;
 
 pub use conduct::{Finished, conduct};
 pub use forecast::forecast;

@@ -25,8 +25,9 @@ pub const ITERATIONS_MAX: u64 = 60;
 /// with t = tr H, so the mean of these has a standard deviation of at most √(m/(2·PROBES)).
 pub const PROBES: usize = 4;
 
-/// Larger systems are not fitted: two runs of this many passes would cost minutes, which is what `inspect` is
-/// there to save. Counted in entries, so that the answer does not depend on the machine.
+/// Larger systems are not fitted: two runs of this many passes would cost minutes, which is what
+/// `inspect` is there to save. Counted in entries, so that the answer does not depend on the
+/// machine.
 pub const ENTRIES_MAX: usize = 50_000_000;
 
 /// γ of robust GCV.
@@ -39,8 +40,9 @@ const STRENGTHS: usize = 33;
 /// A strength counts as reached when the gradient is below this part of s₁ times the total.
 const REACHED: f64 = 1e-3;
 
-/// Runs it for data set `set`. `None` if the matrix has more than [`ENTRIES_MAX`] entries, if the data, less what the reference predicts, are 0, if
-/// numbers that are not finite come up, or if `watch` asks for an end.
+/// Runs it for data set `set`. `None` if the matrix has more than 50 million entries, if the
+/// data, less what the reference predicts, are 0, if numbers that are not finite come up, or if
+/// `watch` asks for an end.
 ///
 /// Memory: 3·(1 + PROBES) vectors of length n and 2·(1 + PROBES) of length m.
 ///

@@ -12,14 +12,18 @@ use crate::job::typed::{
 };
 use crate::solve::StopRules;
 
+/// What is run on a system.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize)]
 #[serde(rename_all = "lowercase")]
 pub enum Command {
+    /// One reconstruction per data set, at one strength.
     Solve,
+    /// A family of strengths, rules that choose among them, and the chosen reconstruction.
     Sweep,
 }
 
 impl Command {
+    /// The word on the command line and in records.
     pub fn word(self) -> &'static str {
         match self {
             Self::Solve => "solve",
@@ -31,30 +35,33 @@ impl Command {
 /// Where the system comes from. Also what `inspect` needs.
 #[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct Source {
-    pub blocks: Vec<BlockSource>,
-    pub reference: Option<ReferenceSource>,
-    pub start: Option<PathBuf>,
-    pub rows: Option<PathBuf>,
-    pub columns: Option<PathBuf>,
-    pub missing: Option<Missing>,
-    pub linearised_at: Option<PathBuf>,
-    pub predicted: Option<PathBuf>,
-    pub duplicates: Duplicates,
-    pub allow_nonfinite: bool,
-    pub precision: Precision,
-    pub grid: Option<GridTable>,
-    pub units: crate::system::Units,
+    pub(crate) blocks: Vec<BlockSource>,
+    pub(crate) reference: Option<ReferenceSource>,
+    pub(crate) start: Option<PathBuf>,
+    pub(crate) rows: Option<PathBuf>,
+    pub(crate) columns: Option<PathBuf>,
+    pub(crate) missing: Option<Missing>,
+    pub(crate) linearised_at: Option<PathBuf>,
+    pub(crate) predicted: Option<PathBuf>,
+    pub(crate) duplicates: Duplicates,
+    pub(crate) allow_nonfinite: bool,
+    pub(crate) precision: Precision,
+    pub(crate) grid: Option<GridTable>,
+    pub(crate) units: crate::system::Units,
 }
 
+/// One matrix with its data; rows of several are stacked in this order.
 #[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct BlockSource {
     pub name: String,
     pub matrix: PathBuf,
     pub data: PathBuf,
     pub uncertainty: Option<UncertaintySource>,
+    /// Multiplies 1/σ.
     pub weight: f64,
 }
 
+/// σ: √(absolute² + (percent/100·|b|)²), or a file of values.
 #[derive(Debug, Clone, PartialEq, Serialize)]
 #[serde(rename_all = "lowercase")]
 pub enum UncertaintySource {
@@ -62,6 +69,7 @@ pub enum UncertaintySource {
     File(PathBuf),
 }
 
+/// x_ref: one value, a file, or the constant that fits all data best.
 #[derive(Debug, Clone, PartialEq, Serialize)]
 #[serde(rename_all = "lowercase")]
 pub enum ReferenceSource {
@@ -82,28 +90,28 @@ pub enum StrengthsWanted {
 /// Everything that decides a result, and where it goes.
 #[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct Settings {
-    pub command: Command,
+    pub(crate) command: Command,
     #[serde(flatten)]
-    pub source: Source,
-    pub strengths: StrengthsWanted,
+    pub(crate) source: Source,
+    pub(crate) strengths: StrengthsWanted,
     /// Penalty of this version: the size of the model's departure from the reference.
-    pub penalty: &'static str,
-    pub method: MethodName,
-    pub rule: Option<RuleName>,
-    pub column_scaling: ScalingName,
+    pub(crate) penalty: &'static str,
+    pub(crate) method: MethodName,
+    pub(crate) rule: Option<RuleName>,
+    pub(crate) column_scaling: ScalingName,
     /// `None`: from the size of the system; a record holds the number.
-    pub max_iterations: Option<u64>,
-    pub gradient_tolerance: f64,
-    pub residual_tolerance: f64,
-    pub noise_factor: Option<f64>,
-    pub time_limit: Option<DurationText>,
-    pub seed: u64,
+    pub(crate) max_iterations: Option<u64>,
+    pub(crate) gradient_tolerance: f64,
+    pub(crate) residual_tolerance: f64,
+    pub(crate) noise_factor: Option<f64>,
+    pub(crate) time_limit: Option<DurationText>,
+    pub(crate) seed: u64,
     #[serde(skip)]
-    pub out: PathBuf,
+    pub(crate) out: PathBuf,
     #[serde(skip)]
-    pub threads: Option<usize>,
+    pub(crate) threads: Option<usize>,
     #[serde(skip)]
-    pub force: bool,
+    pub(crate) force: bool,
 }
 
 /// Folder for results when none is named.
@@ -114,6 +122,8 @@ fn usage(cause: impl Into<String>, remedy: impl Into<String>) -> JobError {
 }
 
 impl Source {
+    /// Resolves what was typed; no file is opened.
+    ///
     /// # Errors
     /// A missing or contradictory setting.
     pub fn new(typed: &Typed) -> Result<Self, JobError> {

@@ -156,9 +156,11 @@ pub struct Typed {
     #[serde(skip)]
     pub force: Option<bool>,
 
+    /// `[units]` of a job file.
     #[arg(skip)]
     pub units: Option<UnitsTable>,
 
+    /// `[grid]` of a job file.
     #[arg(skip)]
     pub grid: Option<GridTable>,
 }
@@ -166,7 +168,9 @@ pub struct Typed {
 /// `data`: a file, or in a job file several blocks.
 #[derive(Debug, Clone, PartialEq)]
 pub enum Data {
+    /// m×k, the rows of `matrix`.
     File(PathBuf),
+    /// Each with a matrix of its own.
     Blocks(Vec<Block>),
 }
 
@@ -174,32 +178,47 @@ pub enum Data {
 #[derive(Debug, Clone, PartialEq, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub struct Block {
+    /// For messages and records; `block 1`, `block 2`, … where unstated.
     pub name: Option<String>,
+    /// A of the block; all blocks have the same unknowns.
     pub matrix: PathBuf,
+    /// b of the block; all blocks have the same number of data sets.
     pub data: PathBuf,
+    /// σ of the block; that of the whole job where unstated.
     pub uncertainty: Option<NumberOrText>,
     /// Multiplies 1/σ.
     pub weight: Option<f64>,
 }
 
+/// `[units]`: words for messages and records; no number is converted.
 #[derive(Debug, Clone, PartialEq, Deserialize)]
 #[serde(deny_unknown_fields)]
 pub struct UnitsTable {
+    /// e.g. `s`
     pub data: Option<String>,
+    /// e.g. `s/m`
     pub model: Option<String>,
+    /// e.g. `slowness`
     pub model_quantity: Option<String>,
     /// Values an expert would call possible, for `inspect`.
     pub plausible: Option<[f64; 2]>,
 }
 
+/// `[grid]`: a rectangular grid whose cells are unknowns; lists hold one value per axis.
 #[derive(Debug, Clone, PartialEq, Deserialize, serde::Serialize)]
 #[serde(deny_unknown_fields)]
 pub struct GridTable {
+    /// Names, one to three.
     pub axes: Vec<String>,
+    /// Cells along each axis.
     pub shape: Vec<usize>,
+    /// Width of a cell along each axis, in `unit`.
     pub spacing: Vec<f64>,
+    /// Outer border of the first cell along each axis, in `unit`.
     pub origin: Vec<f64>,
+    /// Of all lengths, e.g. `m`.
     pub unit: String,
+    /// Name of the axis along which the cell number runs fastest: the first or the last.
     pub fastest: String,
     /// File with a mask of all cells, or a list of cell numbers.
     pub active: Option<PathBuf>,
@@ -358,6 +377,7 @@ impl Typed {
 }
 
 impl NumberOrText {
+    /// The text as a number, `inf` and `nan` among them; `None` where it is none.
     pub fn number(&self) -> Option<f64> {
         self.0.trim().parse().ok()
     }

@@ -7,10 +7,12 @@ use serde::de::{self, Deserializer};
 
 /// Words for a choice, the same on the command line and in a job file.
 macro_rules! words {
-    ($(#[$meta:meta])* $name:ident { $($variant:ident = $word:literal),+ }) => {
+    ($(#[$meta:meta])* $name:ident {
+        $($(#[$of_variant:meta])* $variant:ident = $word:literal),+ $(,)?
+    }) => {
         $(#[$meta])*
         #[derive(Debug, Clone, Copy, PartialEq, Eq, Deserialize, serde::Serialize)]
-        pub enum $name { $(#[serde(rename = $word)] $variant),+ }
+        pub enum $name { $($(#[$of_variant])* #[serde(rename = $word)] $variant),+ }
 
         impl FromStr for $name {
             type Err = String;
@@ -24,13 +26,79 @@ macro_rules! words {
     };
 }
 
-words!(CommandName { Inspect = "inspect", Solve = "solve", Sweep = "sweep" });
-words!(Missing { Nan = "nan" });
-words!(Duplicates { Sum = "sum", Error = "error", Last = "last" });
-words!(Precision { Double = "double", Single = "single" });
-words!(RuleName { Corner = "corner", CornerPruned = "corner-pruned", NoisePlain = "noise-plain" });
-words!(MethodName { Lsqr = "lsqr", Lsmr = "lsmr", Cgls = "cgls", Direct = "direct" });
-words!(ScalingName { Auto = "auto", On = "on", Off = "off" });
+words!(
+    /// The command a job file was written for.
+    CommandName {
+        /// Looks at the system without a solve.
+        Inspect = "inspect",
+        /// One strength.
+        Solve = "solve",
+        /// Many strengths.
+        Sweep = "sweep",
+    }
+);
+words!(
+    /// How a datum that is missing is written in the data.
+    Missing {
+        /// As NaN: left out of its data set.
+        Nan = "nan",
+    }
+);
+words!(
+    /// What several entries at one place of the matrix mean.
+    Duplicates {
+        /// They are added, in file order.
+        Sum = "sum",
+        /// They are an error.
+        Error = "error",
+        /// The last one counts.
+        Last = "last",
+    }
+);
+words!(
+    /// How values of the matrix are kept.
+    Precision {
+        /// f64, or f32 where every value is exactly an f32.
+        Double = "double",
+        /// Rounded to f32.
+        Single = "single",
+    }
+);
+words!(
+    /// A rule that chooses a strength: [`crate::choose::Rule`].
+    RuleName {
+        /// Largest curvature of the L-curve.
+        Corner = "corner",
+        /// Corner of the discrete L-curve by pruning.
+        CornerPruned = "corner-pruned",
+        /// Discrepancy principle without degrees of freedom.
+        NoisePlain = "noise-plain",
+    }
+);
+words!(
+    /// How one strength is solved: [`crate::solve::Method`], or a decomposition.
+    MethodName {
+        /// Smallest damped residual over the Krylov space.
+        Lsqr = "lsqr",
+        /// Smallest gradient over the same space.
+        Lsmr = "lsmr",
+        /// Conjugate gradients on the normal equations.
+        Cgls = "cgls",
+        /// Dense singular value decomposition: [`crate::solve::direct`].
+        Direct = "direct",
+    }
+);
+words!(
+    /// Column scaling as a preconditioner: [`crate::sweep::Scaling`].
+    ScalingName {
+        /// Where it pays and costs a sweep no shared process.
+        Auto = "auto",
+        /// Always.
+        On = "on",
+        /// Never.
+        Off = "off",
+    }
+);
 
 /// Defines a type read from text, with its own rule.
 macro_rules! from_text {
@@ -47,7 +115,9 @@ macro_rules! from_text {
 /// `FROM..TO`, both positive.
 #[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
 pub struct StrengthRange {
+    /// Either end; the order does not matter.
     pub from: f64,
+    /// The other end.
     pub to: f64,
 }
 from_text!(StrengthRange);
@@ -67,6 +137,7 @@ impl FromStr for StrengthRange {
 #[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
 #[serde(transparent)]
 pub struct DurationText {
+    /// Above 0, below a century.
     pub seconds: f64,
 }
 from_text!(DurationText);

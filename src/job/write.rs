@@ -104,7 +104,7 @@ fn unix_seconds() -> u64 {
     now.duration_since(std::time::UNIX_EPOCH).map_or(0, |elapsed| elapsed.as_secs())
 }
 
-/// b − Ax and Ax in data units as the user gave them; NaN in the residual of a datum that is absent.
+/// b − Ax and Ax in data units as the user gave them; the residual of an absent datum is NaN.
 fn fit(system: &System, solved: &Solved) -> (Vec<f64>, Vec<f64>) {
     let absent = |i: usize| system.absent.as_ref().is_some_and(|gone| gone[[i, solved.set]]);
     let shift = |i: usize| system.data_shift.as_ref().map_or(0.0, |shift| shift[i]);

@@ -19,8 +19,11 @@ const SUBTOTAL_ROWS: usize = 256;
 
 /// Compressed rows, borrowed.
 pub struct Rows<'a, V> {
+    /// Place of each row's first entry, and one past the last: length m + 1.
     pub pointers: &'a [usize],
+    /// Column of each entry, below n.
     pub columns: &'a [u32],
+    /// One per entry.
     pub values: &'a [V],
     /// Contiguous rows that share one partial s; together all rows, in order.
     pub groups: &'a [Range<usize>],
@@ -36,13 +39,17 @@ impl<V> Copy for Rows<'_, V> {}
 /// The factors f (dot), h (scatter) and g (squares) of a row in a lane.
 #[derive(Clone, Copy)]
 pub struct Factors {
+    /// f: multiplies aᵢᵀv.
     pub dot: f64,
+    /// h: multiplies u before it goes into s.
     pub scatter: f64,
+    /// g: multiplies u before it is squared.
     pub square: f64,
 }
 
 /// The blocks of one pass: row-major, lanes contiguous.
 pub struct Lanes<'a> {
+    /// k.
     pub count: usize,
     /// n×k.
     pub v: &'a [f64],

@@ -2,7 +2,9 @@
 
 /// A stored value as the number it stands for.
 pub trait Value: Copy + Send + Sync {
+    /// Memory that one value takes.
     const BYTES: u64;
+    /// The value as f64; exact for every storage.
     fn number(self) -> f64;
 }
 

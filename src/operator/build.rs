@@ -2,9 +2,9 @@
 //!
 //! 1. [`RowCounts`]: a first run over the entries counts them per row (any number of threads).
 //! 2. [`Scatter`]: a second run puts each entry at its place in the final arrays. Entries come in
-//!    batches; each batch is sorted into [`Buckets`] by range of rows, and the ranges are then filled
-//!    in parallel, each going through the batch in order, so that file order within a row is kept
-//!    for any number of threads.
+//!    batches; each batch is sorted into [`Buckets`] by range of rows, and the ranges are then
+//!    filled in parallel, each going through the batch in order, so that file order within a row is
+//!    kept for any number of threads.
 //! 3. [`crate::operator::settle`]: rows are sorted by column and repeated entries merged.
 //!
 //! Peak memory: the final arrays (12, 8 or 4 bytes an entry and 8 a row) and one batch.
@@ -28,6 +28,7 @@ pub struct RowCounts {
 }
 
 impl RowCounts {
+    /// No entries yet in any of `rows` rows: 8 bytes a row.
     pub fn new(rows: usize) -> Self {
         let zeros = vec![0usize; rows + 1];
         Self { counts: zeros.into_iter().map(AtomicUsize::new).collect() }
@@ -58,10 +59,12 @@ pub struct RunCounter<'a> {
 }
 
 impl<'a> RunCounter<'a> {
+    /// Counts into `counts`; what is pending is added when the counter is dropped.
     pub fn new(counts: &'a RowCounts) -> Self {
         Self { counts, row: 0, times: 0 }
     }
 
+    /// Counts one entry. Panics, then or later, if the row is out of range.
     #[inline]
     pub fn add(&mut self, row: usize) {
         if row != self.row {
@@ -144,6 +147,7 @@ impl<V: Keep> Buckets<V> {
 }
 
 impl<V: Keep> Scatter<V> {
+    /// The final arrays for what was counted, zeroed; 4 bytes and a value an entry, 8 bytes a row.
     pub fn new(counts: RowCounts, columns: usize) -> Self {
         let (next, total) = counts.into_starts();
         let cuts = cut_rows(&next, total);
@@ -234,6 +238,7 @@ pub struct Feeder<V> {
 }
 
 impl<V: Keep> Feeder<V> {
+    /// As [`Scatter::new`], with an empty batch.
     pub fn new(counts: RowCounts, columns: usize) -> Self {
         let scatter = Scatter::new(counts, columns);
         let first_rows = scatter.first_rows();

@@ -19,6 +19,7 @@ pub trait Keep: Value + Default + PartialEq + Send + Sync {
         (kept.number() == number || number.is_nan()).then_some(kept)
     }
 
+    /// The matrix in the variant of [`StoredRows`] for this storage; nothing is copied.
     fn store(matrix: CsMatI<Self, u32, usize>) -> StoredRows;
 }
 

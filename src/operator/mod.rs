@@ -3,10 +3,10 @@
 //! An operator works on blocks of lanes: v and s are n×k, u is m×k, row-major with lanes
 //! contiguous. A lane is one least-squares problem on the same matrix.
 
-pub mod build;
-pub mod keep;
+pub(crate) mod build;
+pub(crate) mod keep;
 pub mod rows;
-pub mod settle;
+pub(crate) mod settle;
 pub mod stack;
 pub mod weighted;
 pub mod weights;
@@ -31,6 +31,7 @@ pub enum Frame {
 
 /// One pass: u ← Ã v − u·diag(α), s ← Ãᵀ u, squares ← ‖u_l‖² per lane.
 pub struct Pass<'a> {
+    /// Variables of v and s.
     pub frame: Frame,
     /// Data set of each lane, for weights that differ between sets. Its length is k.
     pub sets: &'a [usize],
@@ -46,6 +47,7 @@ pub struct Pass<'a> {
     pub s: &'a mut [f64],
     /// k.
     pub squares: &'a mut [f64],
+    /// From [`Operator::scratch`] of the same operator, for at least k lanes.
     pub scratch: &'a mut Scratch,
 }
 
@@ -57,10 +59,12 @@ pub struct Scratch {
     pub(crate) partial_squares: Vec<f64>,
 }
 
+/// What a solver multiplies with: one [`Pass`] is Ã and Ãᵀ in a single traversal.
 pub trait Operator: Sync {
     /// Rows of u, penalty rows included.
     fn rows(&self) -> usize;
 
+    /// n: rows of v and s.
     fn columns(&self) -> usize;
 
     /// One traversal of the matrix. Deterministic: the same bits for any number of threads, and
@@ -72,6 +76,7 @@ pub trait Operator: Sync {
     /// Memory for passes of up to `lanes` lanes: [`Operator::scratch_bytes`].
     fn scratch(&self, lanes: usize) -> Scratch;
 
+    /// Bytes that [`Operator::scratch`] allocates for so many lanes.
     fn scratch_bytes(&self, lanes: usize) -> u64;
 
     /// Bytes a pass with `lanes` lanes moves to and from memory, counted from the sizes.

@@ -26,7 +26,9 @@ pub enum Precision {
 /// An m×n sparse matrix in rows. Column indices ascend within a row and do not repeat.
 #[derive(Debug, Clone, PartialEq)]
 pub enum StoredRows {
+    /// 12 bytes an entry.
     Double(CsMatI<f64, u32, usize>),
+    /// 8 bytes an entry; each value stands for the f64 of the same number.
     Single(CsMatI<f32, u32, usize>),
     /// Every stored entry is 1; `()` takes no memory.
     Pattern(CsMatI<(), u32, usize>),
@@ -48,6 +50,7 @@ macro_rules! each_storage {
 /// One row's entries, columns ascending.
 #[derive(Clone, Copy)]
 pub struct Row<'a> {
+    /// Column of each stored entry, ascending.
     pub columns: &'a [u32],
     values: RowValues<'a>,
 }
@@ -60,6 +63,7 @@ enum RowValues<'a> {
 }
 
 impl<'a> Row<'a> {
+    /// The entry at `place` of `columns`, as f64. Panics if there is none.
     pub fn value(&self, place: usize) -> f64 {
         match self.values {
             RowValues::Double(values) => values[place],
@@ -75,10 +79,12 @@ impl<'a> Row<'a> {
 }
 
 impl StoredRows {
+    /// m.
     pub fn rows(&self) -> usize {
         each_storage!(self, a => a.rows())
     }
 
+    /// n.
     pub fn columns(&self) -> usize {
         each_storage!(self, a => a.cols())
     }
@@ -112,6 +118,7 @@ impl StoredRows {
         each_storage!(self, a => a.indptr().into_raw_storage())
     }
 
+    /// Row `i`, borrowed. Panics if `i` ≥ m.
     pub fn row(&self, i: usize) -> Row<'_> {
         let range = self.pointers()[i]..self.pointers()[i + 1];
         match self {

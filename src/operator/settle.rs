@@ -25,6 +25,7 @@ pub enum Duplicates {
 /// How to settle.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Default)]
 pub struct Rules {
+    /// What entries at one place mean.
     pub duplicates: Duplicates,
     /// A sum may overflow.
     pub allow_nonfinite: bool,
@@ -41,37 +42,52 @@ impl Rules {
 
 /// Compressed rows whose columns may be unsorted and may repeat.
 pub struct Unsettled<V> {
+    /// n.
     pub columns_total: usize,
     /// m + 1 places, ascending from 0 to the number of entries.
     pub pointers: Vec<usize>,
+    /// Column of each entry, below n.
     pub columns: Vec<u32>,
+    /// One per entry.
     pub values: Vec<V>,
 }
 
 /// The matrix, and how many entries were merged into another.
 #[derive(Debug)]
 pub struct Settled {
+    /// Columns ascend and do not repeat.
     pub matrix: StoredRows,
+    /// Entries that are no longer entries of their own.
     pub duplicates: u64,
 }
 
 /// Why rows could not be settled; rows and columns from 0.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 pub enum Refused {
+    /// Several entries at one place, and that is to be an error.
     Repeated {
+        /// From 0.
         row: usize,
+        /// From 0.
         column: usize,
     },
+    /// Finite entries whose sum is not.
     SumOverflows {
+        /// From 0.
         row: usize,
+        /// From 0.
         column: usize,
     },
+    /// The sum is not 0, but 0 once rounded to f32.
     SumVanishes {
+        /// From 0.
         row: usize,
+        /// From 0.
         column: usize,
     },
     /// More than 2³² − 1 entries in one row.
     RowTooLong {
+        /// From 0.
         row: usize,
     },
 }

@@ -1,9 +1,11 @@
-//! [W A; λ P] D with P = diag(p): a matrix over penalty rows, the strength λ a property of the lane.
+//! [W A; λ P] D with P = diag(p): a matrix over penalty rows; each lane has its own λ.
 //!
 //! Used where a start model or a column scaling rules out carrying λ as a shift.
 
 use crate::operator::{Frame, Operator, Pass, Scratch, Weighted};
 
+/// [W A; λ P] D over a borrowed W A D: u has m + n rows. A pass costs one of W A D and 40 bytes an
+/// unknown and lane.
 pub struct Stacked<'a> {
     top: &'a Weighted<'a>,
     /// p, one factor per unknown; `None` means 1.

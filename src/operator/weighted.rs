@@ -28,14 +28,17 @@ impl<'a> Weighted<'a> {
         Self { matrix, weights, scales, groups: groups(matrix) }
     }
 
+    /// A, as stored.
     pub fn matrix(&self) -> &'a StoredRows {
         self.matrix
     }
 
+    /// W.
     pub fn weights(&self) -> &'a RowWeights {
         self.weights
     }
 
+    /// D of unknown `j`.
     pub fn scale(&self, j: usize) -> f64 {
         self.scales.map_or(1.0, |d| d[j])
     }

@@ -73,14 +73,19 @@ impl Frobenius {
 
 /// A model to certify.
 pub struct Candidate {
+    /// Data set, from 0.
     pub set: usize,
+    /// λ ≥ 0.
     pub strength: f64,
+    /// x, length n, model unit.
     pub model: Vec<f64>,
+    /// Handed on to the [`Solved`] record.
     pub iterations: u64,
 }
 
 /// What the recomputation found besides the [`Solved`] record.
 pub struct Certified {
+    /// Norms by definition; `stop` is still to be decided.
     pub solved: Solved,
     /// Relative gradient in the operator's own variables: what the stop rule tests.
     pub relative_gradient_in_steps: f64,

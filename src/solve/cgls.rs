@@ -4,11 +4,11 @@
 //! y += a p,  g −= a (t + λ² p),  γ' = ‖g‖²,  p ← g + (γ'/γ) p
 //!
 //! The gradient g is recurred and drifts from its definition. Every [`REFRESH_STEPS`] steps, and
-//! whenever the recurred gradient claims convergence or a recurred norm has no digit left, a pass recomputes it; a track is believed
-//! right after that only. Where the recomputed gradient stays behind the recurred one, rounding
-//! has the last word: the lane reports its floor instead of going on, since beyond it the
-//! iteration diverges. The step length is an exact line search (pᵀg, not ‖g‖²), so that a
-//! refreshed gradient can be used with the old direction.
+//! whenever the recurred gradient claims convergence or a recurred norm has no digit left, a pass
+//! recomputes it; a track is believed right after that only. Where the recomputed gradient stays
+//! behind the recurred one, rounding has the last word: the lane reports its floor instead of going
+//! on, since beyond it the iteration diverges. The step length is an exact line search (pᵀg, not
+//! ‖g‖²), so that a refreshed gradient can be used with the old direction.
 //!
 //! Sources: Hestenes & Stiefel, J. Res. NBS 49:409, 1952; Björck, Elfving & Strakoš, SIMAX
 //! 19:720, 1998 (attainable accuracy).
@@ -55,6 +55,7 @@ struct LaneState {
     packed: Option<Vec<f64>>,
 }
 
+/// CGLS on blocks of lanes, one strength a lane: six blocks (u and b̃ of m rows, p, t, g, y of n).
 pub struct Cgls<'a> {
     problem: &'a Problem<'a>,
     operator: Box<dyn Operator + 'a>,

@@ -21,13 +21,14 @@ pub struct Dense {
     pub singular_values: Vec<f64>,
     /// max(m, n) · ε · σ₁: a smaller σ counts as zero.
     pub rank_tolerance: f64,
+    /// Number of σ above `rank_tolerance`.
     pub rank: usize,
 }
 
 /// Multiplications that the decomposition is allowed to cost when nobody asked for it.
 const CHEAP: f64 = 1e8;
 
-/// Numbers in the dense array of such a decomposition: 8 MB, and as much again twice for its factors.
+/// Numbers in the dense array of such a decomposition: 8 MB, and its factors twice as much.
 const CHEAP_NUMBERS: usize = 1_000_000;
 
 /// Numbers in the dense array that `--method direct` accepts: 160 MB.

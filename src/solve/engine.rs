@@ -18,20 +18,28 @@ use crate::solve::{Estimate, Recurrence, Stepped};
 /// What the loop tells while it runs.
 #[derive(Debug, Clone, Copy)]
 pub struct Progress {
+    /// Iterations since the tracks were opened; while a scout runs, its steps.
     pub iteration: u64,
+    /// Traversals of the matrix so far.
     pub passes: u64,
+    /// Tracks opened; 0 while a scout runs.
     pub tracks: usize,
+    /// Tracks that have not stopped.
     pub tracks_live: usize,
     /// Largest relative gradient among live tracks, recurred.
     pub relative_gradient: f64,
+    /// [`StopRules::gradient_tolerance`], which `relative_gradient` is to reach.
     pub tolerance: f64,
+    /// Since the group began.
     pub elapsed: Duration,
 }
 
 /// Whoever looks on: shows progress, and may ask for an end.
 pub trait Watch: Sync {
+    /// Called after every step, on the thread that runs the loop.
     fn progress(&self, _progress: &Progress) {}
 
+    /// Asked before every step; a reason ends all tracks with the models they have.
     fn interrupted(&self) -> Option<Interrupt> {
         None
     }
@@ -44,6 +52,7 @@ impl Watch for Unwatched {}
 
 /// Strengths to be chosen after a few steps, when the largest singular value is known.
 pub struct Scout<'a> {
+    /// Steps before `choose` is asked; fewer where every lane ended or an end was asked for.
     pub steps: usize,
     /// Gets the processes of all lanes; returns at least one λ for all of them.
     pub choose: &'a dyn Fn(&[&Process]) -> Vec<f64>,
@@ -58,10 +67,13 @@ pub struct Outcome {
     pub passes: u64,
     /// Iterations of the slowest track.
     pub iterations: u64,
+    /// One row per live track and iteration, in order of iterations.
     pub history: Vec<HistoryRow>,
     /// One per lane, for methods on the Golub–Kahan process.
     pub processes: Vec<Process>,
+    /// [`Recurrence::workspace_bytes`] at the end of the loop.
     pub workspace_bytes: u64,
+    /// Who asked for an end before every track had stopped by itself.
     pub interrupted: Option<Interrupt>,
 }
 
@@ -366,7 +378,7 @@ impl Run<'_, '_> {
 }
 
 /// Recomputed norms have the last word on why a track stopped. `step_norm` is ‖y‖: rounding and
-/// gradient are compared in the operator's own variables, where the columns may have been evened out.
+/// gradient are compared in the operator's own variables, where columns may have been scaled.
 fn resolve(track: &TrackState, step_norm: f64, certified: Certified, rules: &StopRules) -> Solved {
     let Certified { mut solved, relative_gradient_in_steps: relative } = certified;
     let rounding = track.rounding_fixed + rounding_of_residual(track.frobenius, step_norm, 0.0);

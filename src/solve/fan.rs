@@ -22,13 +22,14 @@ pub trait Rotations: Sized + Send + Sync {
     /// From β₁ and α₁, with damping λ.
     fn new(damping: f64, beta: f64, alpha: f64) -> Self;
 
+    /// λ of the rotations; 0 where a stacked operator carries it.
     fn damping(&self) -> f64;
 
     /// Takes β_{k+1} and α_{k+1}.
     fn turn(&mut self, beta: f64, alpha: f64) -> Self::Update;
 
     /// The vectors at the start, from v₁. `vectors` holds [`Self::VECTORS`] pieces of
-    /// [`PIECE_ROWS`]; only the first `v.len()` of each are in use.
+    /// `PIECE_ROWS`; only the first `v.len()` of each are in use.
     fn begin(v: &[f64], vectors: &mut [f64]);
 
     /// Updates the vectors with v_{k+1}; returns Σ y² over the piece where the method needs it.
@@ -37,6 +38,7 @@ pub trait Rotations: Sized + Send + Sync {
     /// Takes ‖y‖² from the sweep; methods that know it from scalars ignore it.
     fn set_model_norm_squared(&mut self, _squared: f64) {}
 
+    /// Norms after the last turn. Trust, end and floor are for [`Fan`] to fill in.
     fn estimate(&self) -> Estimate;
 }
 
@@ -57,6 +59,8 @@ struct Scouted {
     opened: bool,
 }
 
+/// Golub–Kahan processes of all lanes with the tracks they carry. Memory: blocks u, v, s and
+/// [`Rotations::VECTORS`] vectors of length n a track; with a scout, one more block v a step.
 pub struct Fan<'a, R: Rotations> {
     process: GolubKahan<'a>,
     tracks: Vec<Track<R>>,

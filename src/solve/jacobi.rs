@@ -1,6 +1,9 @@
 //! One-sided Jacobi: the slower, surer way to a singular value decomposition.
 //!
-//! A = Q R; columns of R are turned in pairs until all are orthogonal: R V = U_R Σ, A = (Q U_R) Σ Vᵀ.
+//! A = Q R; columns of R are turned in pairs until all are orthogonal:
+//!
+//! R V = U_R Σ,   A = (Q U_R) Σ Vᵀ
+//!
 //! Sources: Hestenes, J. SIAM 6:51, 1958; Demmel & Veselić, SIMAX 13:1204, 1992 (accuracy).
 
 use nalgebra::DMatrix;

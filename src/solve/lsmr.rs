@@ -13,6 +13,7 @@ use crate::solve::Estimate;
 use crate::solve::fan::Rotations;
 use crate::solve::pieces::PIECE_ROWS;
 
+/// Scalars of one track of LSMR; three vectors: y, h, h̄.
 pub struct Lsmr {
     lambda: f64,
     alpha_bar: f64,

@@ -3,7 +3,7 @@
 //! | symbol | here | meaning |
 //! |---|---|---|
 //! | φ̄ | phi_bar | residual norm of the undamped part |
-//! | ρ̄, ϱ | rho_bar, rho | diagonal of the bidiagonal factor, before and after the second rotation |
+//! | ρ̄, ϱ | rho_bar, rho | diagonal of the bidiagonal factor before, after the second rotation |
 //! | θ | theta | its superdiagonal |
 //! | ψ² summed | damped | what the damping rotations took out of φ̄² |
 //! | w | vector 1 | direction |
@@ -14,6 +14,7 @@ use crate::solve::Estimate;
 use crate::solve::fan::Rotations;
 use crate::solve::pieces::PIECE_ROWS;
 
+/// Scalars of one track of LSQR; two vectors: y, w.
 pub struct Lsqr {
     lambda: f64,
     phi_bar: f64,
@@ -91,7 +92,7 @@ impl Rotations for Lsqr {
     }
 }
 
-/// ‖y‖ from scalars: R is made lower bidiagonal from the right, and ‖y‖ is the norm of the solution there.
+/// ‖y‖ from scalars: R is made lower bidiagonal from the right; there the solution has its norm.
 struct ModelNorm {
     c: f64,
     s: f64,

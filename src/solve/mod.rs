@@ -12,12 +12,12 @@ pub mod cgls;
 pub mod direct;
 pub mod engine;
 pub mod fan;
-pub mod golub_kahan;
+mod golub_kahan;
 pub mod history;
 mod jacobi;
 pub mod lsmr;
 pub mod lsqr;
-pub mod pieces;
+pub(crate) mod pieces;
 pub mod problem;
 pub mod process;
 pub mod stop;
@@ -31,6 +31,7 @@ pub use stop::{Fault, Interrupt, Stop, StopRules};
 /// What one call of [`Recurrence::step`] was.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 pub enum Stepped {
+    /// One step of the method on every lane in the blocks: one pass.
     Iteration,
     /// A pass spent on recomputing what was recurred; the models did not change.
     Refresh,
@@ -65,13 +66,16 @@ impl Estimate {
 
 /// A method: `start` and `step`, each one pass. No loop, no printing, no clock, no allocation.
 pub trait Recurrence {
+    /// First pass: u = W(b − A x₀), s = Ãᵀu, and every track at y = 0. Called once.
     fn start(&mut self);
 
+    /// Advances every lane in the blocks; at most one pass, as [`Stepped`] tells.
     fn step(&mut self) -> Stepped;
 
     /// Number of tracks; each keeps its number when others freeze.
     fn tracks(&self) -> usize;
 
+    /// Norms of a track after the last step, from scalars: O(1), no pass.
     fn estimate(&self, track: usize) -> Estimate;
 
     /// Lane of a track, in the problem's numbering.

@@ -16,7 +16,7 @@ pub fn count(n: usize) -> usize {
 
 /// Calls `work(target piece, source piece, sums of the piece)` for all pieces of two n×k blocks.
 ///
-/// `sums` holds the same count of numbers for every piece, a multiple of k; each piece writes its own.
+/// `sums` holds the same count of numbers for every piece, a multiple of k; each writes its own.
 pub fn for_each(
     k: usize,
     target: &mut [f64],
@@ -44,9 +44,13 @@ pub fn for_each(
 
 /// Four n×k blocks, two of them written.
 pub struct Two<'a> {
+    /// Written.
     pub a: &'a mut [f64],
+    /// Written.
     pub b: &'a mut [f64],
+    /// Read.
     pub c: &'a [f64],
+    /// Read.
     pub d: &'a [f64],
 }
 
@@ -111,6 +115,7 @@ impl TrackVectors {
         count(n) * tracks * per_track * PIECE_ROWS
     }
 
+    /// What [`TrackVectors::new`] allocates: whole pieces, so up to 8 KiB a vector over 8n.
     pub fn bytes(n: usize, tracks: usize, per_track: usize) -> u64 {
         8 * Self::numbers(n, tracks, per_track) as u64
     }

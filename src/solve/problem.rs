@@ -5,14 +5,19 @@ use ndarray::ArrayView2;
 use crate::operator::{Operator, RowWeights, Stacked, Weighted};
 use crate::solve::stop::Stop;
 
+/// An iterative method, one pass an iteration for all lanes.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 pub enum Method {
+    /// Minimises ‖[r; λy]‖ over the Krylov space. Paige & Saunders 1982.
     Lsqr,
+    /// Minimises ‖Ãᵀr − λ²y‖ over the same space. Fong & Saunders 2011.
     Lsmr,
+    /// Conjugate gradients on the normal equations, one strength a lane. Hestenes & Stiefel 1952.
     Cgls,
 }
 
 impl Method {
+    /// The word in settings and records.
     pub fn word(self) -> &'static str {
         match self {
             Self::Lsqr => "lsqr",
@@ -54,10 +59,12 @@ pub struct Problem<'a> {
     pub reference: Option<ArrayView2<'a, f64>>,
     /// x₀ if it is not x_ref, n×1 or n×sets.
     pub start: Option<ArrayView2<'a, f64>>,
+    /// At least one. Those of stacked problems carry one strength each.
     pub lanes: Vec<Lane>,
 }
 
 impl Problem<'_> {
+    /// W A D, or [WA; λP] D where stacked: what a [`crate::solve::Recurrence`] multiplies with.
     pub fn operator(&self) -> Box<dyn Operator + '_> {
         if self.stacked {
             Box::new(Stacked::new(self.matrix, self.penalty))
@@ -66,10 +73,12 @@ impl Problem<'_> {
         }
     }
 
+    /// n.
     pub fn unknowns(&self) -> usize {
         self.matrix.columns()
     }
 
+    /// p of unknown `j`.
     pub fn penalty_factor(&self, j: usize) -> f64 {
         self.penalty.map_or(1.0, |p| p[j])
     }
@@ -125,13 +134,17 @@ fn at(values: &Option<ArrayView2<'_, f64>>, j: usize, set: usize) -> f64 {
 /// One finished track; every norm recomputed from its definition.
 #[derive(Debug, Clone)]
 pub struct Solved {
+    /// Data set, from 0.
     pub set: usize,
+    /// λ ≥ 0.
     pub strength: f64,
     /// x, length n.
     pub model: Vec<f64>,
     /// b − Ax in data units, length m (also of rows of weight 0).
     pub residual: Vec<f64>,
+    /// Why it stopped, by the recomputed norms.
     pub stop: Stop,
+    /// Iterations of this track; 0 for a dense decomposition.
     pub iterations: u64,
     /// ρ = ‖W(b − Ax)‖.
     pub residual_norm: f64,

@@ -2,7 +2,8 @@
 //!
 //! After k steps A V_k = U_{k+1} B_k with B_k lower bidiagonal, (k+1)×k: α on the diagonal, β
 //! below. For any λ the projected problem min ‖B_k y − β₁e₁‖² + λ²‖y‖² costs O(k).
-//! Sources: Paige & Saunders, ACM TOMS 8(1):43, 1982; Golub & Kahan, SIAM J. Numer. Anal. 2:205, 1965.
+//!
+//! Sources: Paige & Saunders, ACM TOMS 8(1):43, 1982; Golub & Kahan, SINUM 2:205, 1965.
 
 /// α and β of one lane.
 #[derive(Debug, Clone, Default, PartialEq)]
@@ -18,6 +19,7 @@ pub struct Process {
 /// The trade-off curve at one λ, from the projected problem.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub struct CurvePoint {
+    /// λ.
     pub strength: f64,
     /// ρ.
     pub residual_norm: f64,
@@ -79,8 +81,8 @@ impl Process {
 
     /// Largest and smallest singular value of B_k, by bisection on the Golub–Kahan tridiagonal
     /// form, which determines them to high relative accuracy (Demmel & Kahan, SISC 11:873, 1990).
-    /// The largest tends to σ_max(Ã) from below; the smallest to the smallest that b̃ excites, from above.
-    /// `None` before the first step.
+    /// The largest tends to σ_max(Ã) from below; the smallest to the smallest that b̃ excites, from
+    /// above. `None` before the first step.
     pub fn singular_values_extreme(&self) -> Option<(f64, f64)> {
         let k = self.steps();
         if k == 0 {

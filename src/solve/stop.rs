@@ -13,9 +13,12 @@ pub enum Fault {
     Norm,
 }
 
+/// Who ended a run before its tracks had stopped by themselves.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 pub enum Interrupt {
+    /// [`StopRules::time_limit`] has passed.
     TimeLimit,
+    /// Whoever looks on asked for it.
     Signal,
 }
 
@@ -36,7 +39,9 @@ pub enum Stop {
     Floor,
     /// The recurred gradient passed, the recomputed one did not, or rounding ended the progress.
     Stalled,
+    /// [`StopRules::max_iterations`] was reached first.
     IterationLimit,
+    /// Ended from outside; the model is that of the last iteration.
     Interrupted(Interrupt),
     /// Not iterated: a dense decomposition.
     Direct,
@@ -63,6 +68,7 @@ impl Stop {
         }
     }
 
+    /// Whether the model is what was asked for; `false` where it was cut short or broke down.
     pub fn converged(self) -> bool {
         matches!(
             self,
@@ -87,17 +93,20 @@ pub struct StopRules {
     pub residual_tolerance: f64,
     /// λ = 0 only: stop at ‖r‖ ≤ τ√(rows of positive weight).
     pub noise_factor: Option<f64>,
+    /// Most iterations of a track; passes for refreshes and certificates come on top.
     pub max_iterations: u64,
     /// The moment at which every track stops; one for all groups of a sweep.
     pub time_limit: Option<Instant>,
 }
 
 impl StopRules {
+    /// Default of `gradient_tolerance`.
     pub const GRADIENT_TOLERANCE: f64 = 1e-8;
+    /// Default of `residual_tolerance`: rounding level only.
     pub const RESIDUAL_TOLERANCE: f64 = 0.0;
 
-    /// Twenty times the smaller side, between 1,000 and 20,000: ill-conditioned survey systems need about
-    /// eleven times the smaller side at λ = 0 (illc1033: 3,700 iterations for 320 unknowns).
+    /// Twenty times the smaller side, between 1,000 and 20,000: ill-conditioned survey systems need
+    /// about eleven times the smaller side at λ = 0 (illc1033: 3,700 iterations for 320 unknowns).
     pub fn max_iterations_default(rows: usize, columns: usize) -> u64 {
         (20 * rows.min(columns) as u64).clamp(1_000, 20_000)
     }

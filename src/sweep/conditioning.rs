@@ -9,9 +9,10 @@ pub const CONDITION_MAX: f64 = 1e13;
 /// σ_max/σ_min of W A, not scaled.
 #[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
 pub struct Condition {
+    /// What is known of it: the condition itself where `exact`.
     pub value: f64,
-    /// From a dense decomposition; otherwise from the process, which can only miss small singular values: the
-    /// true condition is at least this.
+    /// From a dense decomposition; otherwise from the process, which can only miss small singular
+    /// values: the true condition is at least this.
     pub exact: bool,
     /// As high as it may be, as far as one can tell; `value` where nothing else is known.
     pub possible: f64,
@@ -41,6 +42,7 @@ impl Condition {
         Self { value, exact: true, possible: value }
     }
 
+    /// Whether the condition may lie beyond [`CONDITION_MAX`], or is not a number.
     pub fn hopeless(&self) -> bool {
         self.possible.is_nan() || self.possible > CONDITION_MAX
     }

@@ -9,10 +9,13 @@ use crate::sweep::{Strengths, range};
 
 /// What a decomposition tells besides the models.
 pub struct DenseSweep {
+    /// λ, descending; of [`Strengths::Found`], from the first decomposition.
     pub strengths: Vec<f64>,
+    /// One per data set, without a process.
     pub sets: Vec<SetSweep>,
     /// One per data set where weights differ between them, else one.
     pub decompositions: Vec<Dense>,
+    /// Certificates only: one per [`certificate::WIDTH_MAX`] strengths of a data set.
     pub passes: u64,
 }
 

@@ -13,12 +13,15 @@ pub enum Scaling {
     /// sweep its fan.
     #[default]
     Auto,
+    /// Always: a λ > 0 is then stacked and no fan is left.
     On,
+    /// Never.
     Off,
 }
 
 /// What the plan is made from.
 pub struct Facts<'a> {
+    /// A, m×n.
     pub matrix: &'a StoredRows,
     /// Σᵢ(wᵢaᵢⱼ)² of every column, of the first data set.
     pub column_squares: &'a [f64],
@@ -26,8 +29,11 @@ pub struct Facts<'a> {
     pub penalty: Option<&'a [f64]>,
     /// Unknowns held at the reference.
     pub held: Option<&'a [bool]>,
+    /// A start x₀ other than x_ref is given.
     pub starts_elsewhere: bool,
+    /// Decides whether a lane can carry several strengths.
     pub method: Method,
+    /// What the caller wants.
     pub scaling: Scaling,
 }
 

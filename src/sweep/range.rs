@@ -17,7 +17,10 @@ pub enum Strengths {
     /// These, in descending order.
     Given(Vec<f64>),
     /// From the largest singular value down to [`SPAN`] times it, evenly in log λ.
-    Found { count: Option<usize> },
+    Found {
+        /// `None`: [`PER_DECADE`] a decade.
+        count: Option<usize>,
+    },
 }
 
 impl Strengths {

@@ -12,7 +12,9 @@ use crate::sweep::{LANES_MAX, Strengths, range};
 
 /// A family of strengths on one system.
 pub struct Request<'a> {
+    /// A, m×n.
     pub matrix: &'a StoredRows,
+    /// W: 1/σ times the weight of the block, 0 for a datum that does not count.
     pub weights: &'a RowWeights,
     /// m×sets, data units.
     pub data: ArrayView2<'a, f64>,
@@ -24,9 +26,13 @@ pub struct Request<'a> {
     pub penalty: Option<&'a [f64]>,
     /// Unknowns held at the reference.
     pub held: Option<&'a [bool]>,
+    /// Not used by [`crate::sweep::dense`].
     pub method: Method,
+    /// Column scaling; not used by [`crate::sweep::dense`].
     pub scaling: Scaling,
+    /// Which λ. With several, all are to be above 0: 0 is solved in other variables.
     pub strengths: Strengths,
+    /// When tracks stop; its time limit is one for all groups.
     pub rules: StopRules,
 }
 
@@ -39,19 +45,26 @@ pub struct SetSweep {
     pub process: Option<Process>,
 }
 
+/// What [`run`] leaves.
 #[derive(Debug)]
 pub struct Sweep {
     /// Descending.
     pub strengths: Vec<f64>,
+    /// One per data set.
     pub sets: Vec<SetSweep>,
     /// Traversals of the matrix in all groups.
     pub passes: u64,
     /// Iterations of the slowest track, added over the groups that ran one after the other.
     pub iterations: u64,
+    /// Rows of all groups, one group after the other; seconds begin anew in each.
     pub history: Vec<HistoryRow>,
+    /// How it was solved; the same for all groups.
     pub plan: Plan,
+    /// Lanes of the widest group.
     pub lanes_max: usize,
+    /// The largest of the groups', which run one after the other.
     pub workspace_bytes: u64,
+    /// The first reason for which a group was cut short.
     pub interrupted: Option<Interrupt>,
 }
 

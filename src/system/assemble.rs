@@ -261,7 +261,7 @@ fn nothing_left(set: usize, sets: usize, names: &Names, origins: &[sigma::Origin
     SystemError::Data(Complaint::new(cause, remedy).in_file(&origins[0].data_path))
 }
 
-/// Turns the data into b − g(x_k) + A x_k and hands back g(x_k) − A x_k. Data that are absent keep 0.
+/// Turns the data into b − g(x_k) + A x_k and hands back g(x_k) − A x_k. Absent data keep 0.
 fn linearise(
     data: &mut Array2<f64>,
     matrix: &crate::operator::StoredRows,

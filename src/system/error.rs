@@ -23,8 +23,10 @@ pub enum SystemError {
     /// The columns table.
     #[error("{0}")]
     Columns(Complaint),
+    /// The reference model: its shape or its values.
     #[error("{0}")]
     Reference(Complaint),
+    /// The linearisation point or what was predicted there: length or values.
     #[error("{0}")]
     Linearisation(Complaint),
     /// The grid does not fit the matrix.
@@ -33,6 +35,7 @@ pub enum SystemError {
 }
 
 impl SystemError {
+    /// What to tell the user.
     pub fn complaint(&self) -> &Complaint {
         match self {
             Self::Length(complaint)

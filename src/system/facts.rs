@@ -20,12 +20,17 @@ pub struct Facts {
     pub data_sets: usize,
     /// Stored entries, explicit zeros included.
     pub entries: usize,
+    /// Stored entries that are 0.
     pub explicit_zeros: usize,
+    /// Stored entries that are NaN or infinite.
     pub nonfinite_entries: usize,
     /// `f64`, `f32` or `pattern`.
     pub storage: &'static str,
+    /// Memory of the stored arrays.
     pub matrix_bytes: u64,
+    /// Row by row.
     pub row: RowFacts,
+    /// Column by column.
     pub column: ColumnFacts,
     /// Magnitudes |aᵢⱼ| of the entries; the median within 3 %.
     pub entry_magnitude: Spread,
@@ -33,12 +38,15 @@ pub struct Facts {
     pub row_magnitude: Spread,
     /// Of Σᵢ |aᵢⱼ| over the columns that have entries.
     pub column_magnitude: Spread,
+    /// Rows without an entry that counts, ascending.
     pub empty_rows: Vec<usize>,
+    /// Columns without an entry that counts, ascending.
     pub empty_columns: Vec<usize>,
+    /// Classes of equal rows, by first member.
     pub duplicate_rows: Vec<DuplicateRows>,
     /// Classes of equal columns: the data cannot tell their unknowns apart.
     pub duplicate_columns: Vec<Vec<usize>>,
-    /// Rows without entries whose datum counts and is not 0, in any data set: no model explains them.
+    /// Rows without entries whose datum counts and is not 0, in any data set: beyond any model.
     pub unexplainable_rows: Vec<usize>,
     /// One for each data set.
     pub sets: Vec<SetFacts>,
@@ -47,9 +55,13 @@ pub struct Facts {
 /// Sums over the entries of each row; all of length m.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct RowFacts {
+    /// Entries.
     pub count: Vec<u32>,
+    /// Σⱼ aᵢⱼ.
     pub sum: Vec<f64>,
+    /// Σⱼ |aᵢⱼ|.
     pub absolute_sum: Vec<f64>,
+    /// Σⱼ aᵢⱼ².
     pub square_sum: Vec<f64>,
 }
 
@@ -58,6 +70,7 @@ pub struct RowFacts {
 pub struct ColumnFacts {
     /// Hits.
     pub count: Vec<u32>,
+    /// Σᵢ |aᵢⱼ|.
     pub absolute_sum: Vec<f64>,
     /// Σᵢ aᵢⱼ².
     pub square_sum: Vec<f64>,
@@ -89,7 +102,7 @@ pub struct ConstantFit {
     pub reciprocal: f64,
     /// Share of ‖Wb‖² (less what fixed unknowns contribute) that it explains, 0 to 1.
     pub share: f64,
-    /// Standard deviation of the value if the weights are 1/σ and the model is constant; model unit.
+    /// Standard deviation of the value, model unit, if weights are 1/σ and the model is constant.
     pub deviation: f64,
 }
 

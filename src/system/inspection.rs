@@ -7,17 +7,24 @@ use super::spread::middle;
 use super::{BlockSpan, System, Units};
 use crate::base::Grid;
 
+/// The record of an inspection.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct Inspection {
     /// Gravest first.
     pub findings: Vec<Finding>,
+    /// Sizes and storage.
     pub shape: Shape,
+    /// As stated by the user.
     pub units: Units,
+    /// Hits.
     pub coverage: Coverage,
+    /// Magnitudes.
     pub scaling: Scaling,
     /// One for each data set.
     pub data_sets: Vec<SetSummary>,
+    /// By Σⱼ |aᵢⱼ|.
     pub rows_by_size: Extremes,
+    /// By Σᵢ |aᵢⱼ|.
     pub columns_by_size: Extremes,
     /// `None` if no short run was made.
     pub quick_fit: Option<FitSummary>,
@@ -25,22 +32,32 @@ pub struct Inspection {
     pub forecast: Option<Forecast>,
 }
 
+/// Sizes of the system and how it is held.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct Shape {
+    /// m, data that are left out among them.
     pub rows: usize,
+    /// n, fixed unknowns among them.
     pub columns: usize,
+    /// k, columns of the data.
     pub data_sets: usize,
     /// Stored, explicit zeros included.
     pub entries: usize,
     /// entries/(rows · columns).
     pub filled: f64,
+    /// Stored entries that are 0.
     pub explicit_zeros: usize,
+    /// Stored entries that are NaN or infinite.
     pub nonfinite_entries: usize,
+    /// `f64`, `f32` or `pattern`.
     pub storage: &'static str,
+    /// Memory of the stored arrays.
     pub matrix_bytes: u64,
     /// At most [`BLOCKS_MAX`]; `blocks_total` counts all.
     pub blocks: Vec<BlockSpan>,
+    /// Blocks that are stacked, listed or not.
     pub blocks_total: usize,
+    /// `None` if the user describes none.
     pub grid: Option<GridSummary>,
 }
 
@@ -52,8 +69,11 @@ pub const BLOCKS_MAX: usize = 100;
 pub struct GridSummary {
     /// As listed by the user: name, cells, spacing.
     pub axes: Vec<(String, usize, f64)>,
+    /// Unit of all lengths.
     pub unit: String,
+    /// Name of the axis along which the cell number runs fastest.
     pub fastest: String,
+    /// Active cells.
     pub unknowns: usize,
 }
 
@@ -64,7 +84,9 @@ pub struct Coverage {
     pub row_entries: Spread,
     /// Entries in each column that has any: hits.
     pub column_entries: Spread,
+    /// Rows without entries: their data say nothing of the model.
     pub empty_rows: Named,
+    /// Columns without entries: no datum touches their unknowns.
     pub empty_columns: Named,
     /// Rows that repeat an earlier one.
     pub repeated_rows: usize,
@@ -72,17 +94,20 @@ pub struct Coverage {
     pub copied_rows: usize,
     /// Unknowns that share their column with another.
     pub equal_columns: usize,
+    /// Rows without entries whose datum counts and is not 0.
     pub unexplainable_rows: Named,
 }
 
 /// A count and the first few names.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct Named {
+    /// How many there are, named or not.
     pub count: usize,
     /// At most [`PLACES_MAX`].
     pub first: Vec<String>,
 }
 
+/// Spreads of magnitudes over entries, rows and columns.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct Scaling {
     /// |aᵢⱼ|; the median within 3 %.
@@ -95,6 +120,7 @@ pub struct Scaling {
     pub weighted_column_norm: Spread,
 }
 
+/// The data of one data set.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct SetSummary {
     /// Data that count.
@@ -109,38 +135,51 @@ pub struct SetSummary {
     pub weighted_data_norm: f64,
     /// ‖WA‖_F.
     pub weighted_matrix_norm: f64,
+    /// Share of ‖Wb‖² in rows without entries, which no model explains.
     pub unexplainable_share: f64,
+    /// The one value for all unknowns that fits best, `None` where every value fits equally well.
     pub constant: Option<ConstantFit>,
 }
 
 /// The lightest and the heaviest, by the sum of |entries|, empty ones aside.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct Extremes {
+    /// (name, sum), smallest first.
     pub lightest: Vec<(String, f64)>,
+    /// (name, sum), largest first.
     pub heaviest: Vec<(String, f64)>,
 }
 
+/// What a short run over strengths says of the noise.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct FitSummary {
     /// From 1.
     pub data_set: usize,
+    /// λ that robust GCV chooses.
     pub strength: f64,
+    /// tr H at that strength; an estimate where the system is not small.
     pub effective_parameters: f64,
     /// ‖W(b − Ax)‖/√(m − tr H): 1 where weights are 1/σ and σ is right.
     pub noise: f64,
     /// The same over all strengths whose GCV is within a factor 2 of the least.
     pub noise_range: (f64, f64),
+    /// Strengths that the run has reached.
     pub strengths_tried: usize,
 }
 
+/// What a run with LSQR will cost on this machine.
 #[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
 pub struct Forecast {
     /// Of a solve at one strength.
     pub peak_bytes: u64,
     /// Of a sweep over the default number of strengths.
     pub sweep_peak_bytes: u64,
+    /// Of all data sets in one group, measured on a probe.
     pub seconds_per_iteration: f64,
+    /// Counted from the sizes.
     pub bytes_per_pass: u64,
+    /// `bytes_per_pass` over `seconds_per_iteration`; more than memory grants where the cache
+    /// helps.
     pub bandwidth_bytes_per_second: f64,
 }
 

@@ -43,7 +43,8 @@ pub struct System {
     pub data: Array2<f64>,
     /// m×k: no datum was given (NaN, or not finite in a row left out); `None` if all were.
     pub absent: Option<Array2<bool>>,
-    /// Added to `data` gives the data as read (g(x_k) − A x_k); `None` without a linearisation point. Length m.
+    /// Added to `data` gives the data as read (g(x_k) − A x_k); `None` without a linearisation
+    /// point. Length m.
     pub data_shift: Option<Vec<f64>>,
     /// σ in data units, m×1 or m×k; `None` if the user gave none. Unchecked where a datum does
     /// not count.
@@ -52,11 +53,15 @@ pub struct System {
     pub weights: RowWeights,
     /// x_ref, n×1 or n×k, model unit; `None` means 0. A fixed unknown holds its value here.
     pub reference: Option<Array2<f64>>,
+    /// Without lists where no table was given.
     pub rows: RowTable,
+    /// Without lists where no table was given.
     pub columns: ColumnTable,
     /// In the order of their rows; at least one.
     pub blocks: Vec<BlockSpan>,
+    /// Cells that unknowns stand for, if the user describes any.
     pub grid: Option<Grid>,
+    /// For words in reports and bounds in findings; no number is converted.
     pub units: Units,
 }
 
@@ -76,8 +81,11 @@ pub struct Units {
 /// The rows of one data block.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct BlockSpan {
+    /// As the user calls it; `data` where there is one block without a name.
     pub name: String,
+    /// From 0, in the stacked matrix.
     pub first_row: usize,
+    /// Rows of the block, those that are left out among them.
     pub rows: usize,
     /// Multiplies 1/σ of the block's rows.
     pub weight: f64,
@@ -86,9 +94,11 @@ pub struct BlockSpan {
 /// What `--rows` says; every list has length m where present.
 #[derive(Debug, Clone, Default, PartialEq)]
 pub struct RowTable {
+    /// Names of the rows for messages.
     pub ids: Option<Vec<String>>,
     /// Place in `group_names` of each row's group.
     pub groups: Option<Vec<u32>>,
+    /// In order of first appearance; empty without groups.
     pub group_names: Vec<String>,
     /// Physical order of the rows (time, angle, offset), for whiteness.
     pub order: Option<Vec<f64>>,
@@ -101,8 +111,10 @@ pub struct RowTable {
 /// What `--columns` says; every list has length n where present.
 #[derive(Debug, Clone, Default, PartialEq)]
 pub struct ColumnTable {
+    /// Names of the unknowns for messages.
     pub names: Option<Vec<String>>,
-    /// e.g. `cell`, `station`; with a grid, unknowns of kind `cell` (or of no kind) are its cells in order.
+    /// e.g. `cell`, `station`; with a grid, unknowns of kind `cell` (or of no kind) are its cells
+    /// in order.
     pub kinds: Option<Vec<String>>,
     /// Factor on the penalty of each unknown, not negative; absent means 1.
     pub penalty_weights: Option<Vec<f64>>,
@@ -113,19 +125,33 @@ pub struct ColumnTable {
 /// How σ was given.
 #[derive(Debug, Clone, PartialEq)]
 pub enum Uncertainty {
-    /// √(absolute² + (percent/100·|b|)²), data units. `2%` is (0, 2), `0.5` is (0.5, 0), `0.5+2%` is (0.5, 2).
-    Formula { absolute: f64, percent: f64 },
+    /// √(absolute² + (percent/100·|b|)²), data units. `2%` is (0, 2), `0.5` is (0.5, 0), `0.5+2%`
+    /// is (0.5, 2).
+    Formula {
+        /// Data unit.
+        absolute: f64,
+        /// Of |b|.
+        percent: f64,
+    },
     /// m×1 or m×k σ values read from `path`.
-    Values { values: Array2<f64>, path: PathBuf },
+    Values {
+        /// Data unit.
+        values: Array2<f64>,
+        /// For messages.
+        path: PathBuf,
+    },
 }
 
 /// How x_ref was given.
 #[derive(Debug, Clone, PartialEq)]
 pub enum Reference {
+    /// The same value for every unknown, model unit.
     Number(f64),
     /// n×1 or n×k.
     Values {
+        /// Model unit.
         values: Array2<f64>,
+        /// For messages.
         path: PathBuf,
     },
     /// The one constant that fits all data best (weighted), per data set.
@@ -135,13 +161,19 @@ pub enum Reference {
 /// One block as read, before it is checked against the others.
 #[derive(Debug)]
 pub struct BlockPart {
+    /// For messages, and in [`BlockSpan`].
     pub name: String,
+    /// A of the block, rows of the block × n.
     pub matrix: StoredRows,
+    /// For messages.
     pub matrix_path: PathBuf,
     /// m×k.
     pub data: Array2<f64>,
+    /// For messages.
     pub data_path: PathBuf,
+    /// `None`: σ = 1 and unstated.
     pub uncertainty: Option<Uncertainty>,
+    /// Multiplies 1/σ; positive and finite, or [`SystemError::Weight`].
     pub weight: f64,
 }
 
@@ -150,22 +182,31 @@ pub struct BlockPart {
 pub struct Linearisation {
     /// x_k, length n.
     pub model: Vec<f64>,
+    /// For messages.
     pub model_path: PathBuf,
     /// g(x_k), length m (all blocks).
     pub predicted: Vec<f64>,
+    /// For messages.
     pub predicted_path: PathBuf,
 }
 
 /// Everything `System::assemble` needs, as read from files.
 #[derive(Debug)]
 pub struct Parts {
+    /// In the order in which they are stacked; at least one.
     pub blocks: Vec<BlockPart>,
+    /// The table and its file; lists as long as all blocks together.
     pub rows: Option<(RowTable, PathBuf)>,
+    /// The table and its file.
     pub columns: Option<(ColumnTable, PathBuf)>,
+    /// `None`: 0.
     pub reference: Option<Reference>,
     /// A NaN datum is left out (of its data set); otherwise it is an error.
     pub missing_nan: bool,
+    /// Turns the data into b − g(x_k) + A x_k.
     pub linearisation: Option<Linearisation>,
+    /// As many cells as unknowns of kind `cell`.
     pub grid: Option<Grid>,
+    /// Handed on to [`System::units`].
     pub units: Units,
 }

@@ -33,7 +33,9 @@ const RAYS_PER_TASK: usize = 256;
 /// grid's unit. Coordinates beyond the grid's axes are 0.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub struct Segment {
+    /// Start; the direction does not matter.
     pub from: [f64; 3],
+    /// End.
     pub to: [f64; 3],
 }
 
@@ -64,12 +66,16 @@ impl Segment {
 /// Why a ray cannot be traced.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, thiserror::Error)]
 pub enum RayFlaw {
+    /// A coordinate is NaN or infinite.
     #[error("a coordinate is not a finite number")]
     NotFinite,
+    /// Both ends are one point.
     #[error("it starts and ends at the same point")]
     ZeroLength,
+    /// Lengths overflow.
     #[error("its coordinates are too large for arithmetic")]
     TooLarge,
+    /// A coordinate other than 0 where the grid has no axis.
     #[error("it has a coordinate along an axis that the grid does not have")]
     BeyondAxes,
 }
@@ -91,7 +97,9 @@ impl RayFlaw {
 pub struct RayFault {
     /// From 0; messages count from 1.
     pub row: usize,
+    /// Why.
     pub flaw: RayFlaw,
+    /// As given.
     pub segment: Segment,
 }
 

@@ -3,8 +3,11 @@
 /// Spread of positive magnitudes. All 0 where there is none.
 #[derive(Debug, Clone, Copy, Default, PartialEq, serde::Serialize)]
 pub struct Spread {
+    /// Smallest.
     pub min: f64,
+    /// Exact, or within 3 % where the owner says so.
     pub median: f64,
+    /// Largest.
     pub max: f64,
 }
 

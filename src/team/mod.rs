@@ -5,6 +5,7 @@ use std::env;
 /// How many threads, and what decided it.
 #[derive(Debug, Clone, PartialEq, Eq, serde::Serialize)]
 pub struct Threads {
+    /// At least 1.
     pub count: usize,
     /// `--threads`, the name of an environment variable, or `affinity`.
     pub from: String,

@@ -1,4 +1,4 @@
-//! Vectors and data sets: an array, or a coordinate file of one column in which what is missing is 0.
+//! Vectors and data sets: an array, or a coordinate file of one column; what is missing is 0.
 
 use ndarray::Array2;
 

@@ -1,8 +1,8 @@
 //! The entries of one piece of text.
 //!
-//! A quick way takes lines that hold exactly what is usual; whatever it does not like goes to a slow
-//! way that alone decides what is accepted and words the complaints. Where the quick way gives an
-//! answer it is that of the slow way (tested at the end).
+//! A quick way takes lines that hold exactly what is usual; whatever it does not like goes to a
+//! slow way that alone decides what is accepted and words the complaints. Where the quick way gives
+//! an answer it is that of the slow way (tested at the end).
 
 use super::super::complain::{LINE_BYTES_MAX, check_single, nonfinite};
 use super::super::number::{Whole, real, whole};

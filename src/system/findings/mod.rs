@@ -82,20 +82,26 @@ pub enum Severity {
 pub struct Evidence {
     /// What the number is, e.g. `noise against stated uncertainty`.
     pub name: &'static str,
+    /// In `unit`.
     pub value: f64,
     /// Empty for a pure number.
     pub unit: String,
 }
 
+/// Something that looks wrong, on what grounds, and what to do.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct Finding {
+    /// What it is about.
     pub kind: Kind,
+    /// How much it should worry its reader.
     pub severity: Severity,
     /// What is seen, in words of the user's own quantities.
     pub sentence: String,
+    /// The numbers it rests on.
     pub evidence: Vec<Evidence>,
     /// Names of rows or columns, at most [`PLACES_MAX`].
     pub places: Vec<String>,
+    /// What to do about it, as a sentence.
     pub remedy: String,
 }
 
@@ -128,6 +134,7 @@ impl Finding {
 /// taken out of them.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
 pub struct QuickFit {
+    /// From 0.
     pub data_set: usize,
     /// Strengths tried, in any order, over a few decades.
     pub trials: Vec<Trial>,
@@ -156,6 +163,7 @@ impl QuickFit {
 /// One strength of a [`QuickFit`].
 #[derive(Debug, Clone, Copy, PartialEq, serde::Serialize)]
 pub struct Trial {
+    /// λ.
     pub strength: f64,
     /// ‖W(Ax − b)‖.
     pub residual_norm: f64,
