@@ -41,7 +41,7 @@ pub fn corner(curve: &Curve<'_>) -> RuleResult {
     let Some(process) = curve.process else {
         return RuleResult::not_applicable(
             rule,
-            "needs the scalars of a fan: one process for all strengths",
+            "needs lsqr or lsmr with one process for all strengths",
         );
     };
     let (Some(first), Some(last)) = (curve.points.first(), curve.points.last()) else {

@@ -26,6 +26,7 @@ pub struct Point {
 }
 
 /// What a rule may look at.
+#[derive(Clone, Copy)]
 pub struct Curve<'a> {
     /// Strengths descending, as swept.
     pub points: &'a [Point],

@@ -112,43 +112,48 @@ pub struct Choice {
     pub reasons: Vec<String>,
 }
 
-/// Applies every rule; `wanted` makes one decisive. Else the noise level is where σ is stated, then
-/// the curvature corner, then the pruned one: on test problems a corner was within twice the best
-/// error less often.
+/// Applies every rule to the strengths that converged; `wanted` makes one decisive where it applies.
+/// Else the noise level is where σ is stated, then the curvature corner, then the pruned one: on
+/// test problems a corner was within twice the best error less often.
 ///
 /// Panics on a sweep without points.
 pub fn choose(curve: &Curve<'_>, wanted: Option<Rule>) -> Choice {
-    let rules = vec![noise_plain(curve), corner(curve), corner_pruned(curve)];
+    let places: Vec<usize> =
+        (0..curve.points.len()).filter(|&i| curve.points[i].converged).collect();
+    let converged: Vec<Point> = places.iter().map(|&i| curve.points[i]).collect();
+    let judged = Curve { points: &converged, ..*curve };
+    let rules = vec![noise_plain(&judged), corner(&judged), corner_pruned(&judged)];
     let applicable: Vec<&RuleResult> = rules.iter().filter(|r| r.applicable).collect();
-    let inner = |r: &&&RuleResult| !r.at_edge;
-    let decisive = match wanted {
-        Some(rule) => applicable.iter().find(|r| r.rule == rule),
-        None => applicable.iter().find(inner).or_else(|| applicable.first()),
-    };
+    let by_itself = applicable.iter().find(|r| !r.at_edge).or_else(|| applicable.first()).copied();
+    let asked = wanted.and_then(|rule| applicable.iter().find(|r| r.rule == rule).copied());
+    let decisive = asked.or(by_itself);
     let spread_decades = spread(&applicable);
     let mut reasons = Vec::new();
-    let verdict = judge(&applicable, spread_decades, decisive.copied(), &mut reasons);
-    let (place, rule) = match decisive {
-        Some(result) => {
-            let strength = result.strength.expect("an applicable rule has a strength");
-            (nearest(curve.points, strength), Some(result.rule))
-        }
+    let left_out = curve.points.len() - converged.len();
+    if left_out > 0 {
+        reasons.push(format!(
+            "{left_out} of {} strengths did not converge and have no say.",
+            curve.points.len()
+        ));
+    }
+    if let Some(rule) = wanted.filter(|_| asked.is_none()) {
+        let instead = match decisive {
+            Some(result) => format!("{} decides instead", result.rule.word()),
+            None => "no other does".into(),
+        };
+        reasons.push(format!("The rule asked for, {}, does not apply; {instead}.", rule.word()));
+    }
+    let verdict = judge(&applicable, spread_decades, decisive, &mut reasons);
+    let place = match decisive.and_then(|result| result.strength) {
+        Some(strength) => places[nearest(&converged, strength)],
         None => {
             reasons.push(
-                "No rule applies, so the middle of the range is handed over: choose with --strength in `ellbow solve`.".into(),
+                "No rule applies, so nothing is chosen and the model in the middle of the range stands in: take a strength of your own with `ellbow solve`.".into(),
             );
-            (curve.points.len() / 2, None)
+            places.get(places.len() / 2).copied().unwrap_or(curve.points.len() / 2)
         }
     };
-    if let Some(rule) = wanted.filter(|rule| decisive.is_none_or(|d| d.rule != *rule)) {
-        let note = rules.iter().find(|r| r.rule == rule).map_or("", |r| r.note.as_str());
-        reasons.push(format!("Rule {} does not apply: {note}.", rule.word()));
-    }
-    if !curve.points[place].converged {
-        reasons.push(
-            "The model at the chosen strength has not converged: raise --max-iterations.".into(),
-        );
-    }
+    let rule = decisive.map(|result| result.rule);
     reasons.extend(rule.map(|rule| character(rule).to_owned()));
     let strength = curve.points[place].strength;
     Choice { strength, place, rule, rules, spread_decades, verdict, reasons }
@@ -214,4 +219,49 @@ fn nearest(points: &[Point], strength: f64) -> usize {
     (0..points.len())
         .min_by(|&a, &b| distance(&points[a]).total_cmp(&distance(&points[b])))
         .expect("a sweep with points")
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    fn points(unconverged: usize) -> Vec<Point> {
+        (0..12)
+            .map(|i| {
+                let strength = 10f64.powf(1.0 - i as f64 / 4.0);
+                let converged = i < 12 - unconverged;
+                // What did not converge lies anywhere.
+                let residual_norm = if converged { strength } else { 50.0 };
+                Point { strength, residual_norm, penalty_norm: 1.0, converged }
+            })
+            .collect()
+    }
+
+    #[test]
+    fn strengths_that_did_not_converge_have_no_say() {
+        let of = |unconverged, wanted| {
+            let points = points(unconverged);
+            let curve = Curve { points: &points, process: None, data_of_known_noise: Some(4) };
+            choose(&curve, wanted)
+        };
+        let whole = of(0, None);
+        assert_eq!((whole.rule, whole.place), (Some(Rule::NoisePlain), 3));
+        let part = of(5, None);
+        assert_eq!((part.rule, part.place), (whole.rule, whole.place));
+        assert!(part.reasons[0].starts_with("5 of 12 strengths did not converge"));
+        assert!(of(12, None).rule.is_none());
+    }
+
+    #[test]
+    fn a_rule_that_does_not_apply_gives_way_and_says_so() {
+        let points = points(0);
+        let curve = Curve { points: &points, process: None, data_of_known_noise: Some(4) };
+        let choice = choose(&curve, Some(Rule::Corner));
+        assert_eq!(choice.rule, Some(Rule::NoisePlain));
+        assert!(choice.reasons[0].contains("corner, does not apply; noise-plain decides"));
+        let blind = Curve { points: &points[..2], data_of_known_noise: None, ..curve };
+        let choice = choose(&blind, Some(Rule::Corner));
+        assert!(choice.rule.is_none() && choice.verdict == Verdict::Undetermined);
+        assert!(choice.reasons.iter().any(|reason| reason.contains("nothing is chosen")));
+    }
 }

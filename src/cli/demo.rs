@@ -26,7 +26,7 @@ pub(super) struct DemoArguments {
 
 pub(super) fn run(arguments: &DemoArguments) -> Result<u8, JobError> {
     let problem = demo::find(&arguments.name)?;
-    let job_file = demo::write(problem, &arguments.out)?;
+    let job_file = demo::write(problem, &arguments.out, arguments.force)?;
     if !arguments.show.quiet {
         say(&format!("Wrote {} to {}.", problem.name, show(&arguments.out)));
         say(&format!("Running: ellbow sweep {}\n", show(&job_file)));

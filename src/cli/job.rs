@@ -6,6 +6,7 @@ use crate::cli::{JobArguments, Show, exit, print, print_json, say, typed};
 use crate::job::{Command, Finished, JobError, Settings, conduct};
 use crate::report::page;
 use crate::report::record::Summary;
+use crate::solve::{Fault, Stop};
 use crate::team::Threads;
 
 pub(super) fn run(command: Command, arguments: JobArguments) -> Result<u8, JobError> {
@@ -40,8 +41,20 @@ pub(super) fn run_settings(settings: &Settings, show_as: Show) -> Result<u8, Job
         (Some(summary), false) => print(&page::page(summary, &place)),
         _ => print_json(&record),
     }
-    let converged = record.pointer("/stop/converged").and_then(serde_json::Value::as_bool);
-    Ok(if converged == Some(true) { exit::CONVERGED } else { exit::NOT_CONVERGED })
+    Ok(code(&record))
+}
+
+/// A run that was stopped early is not converged, whatever its chosen strength did.
+fn code(record: &serde_json::Value) -> u8 {
+    let flag = |place: &str| record.pointer(place).and_then(serde_json::Value::as_bool);
+    let reason = record.pointer("/stop/reason").and_then(serde_json::Value::as_str);
+    if reason == Some(Stop::NotFinite(Fault::Norm).word()) {
+        exit::BROKE_DOWN
+    } else if flag("/stop/converged") == Some(true) && flag("/interrupted") != Some(true) {
+        exit::CONVERGED
+    } else {
+        exit::NOT_CONVERGED
+    }
 }
 
 pub(super) fn no_threads(error: String) -> JobError {

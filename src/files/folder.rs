@@ -112,6 +112,19 @@ impl Folder {
         self.path.join(name)
     }
 
+    /// Whether a file of that name is there. Panics as [`Folder::place`].
+    pub fn holds(&self, name: &str) -> bool {
+        self.place(name).is_file()
+    }
+
+    /// The name under which a path lies directly in this folder, whatever way it is spelt.
+    pub fn name_of(&self, path: &Path) -> Option<String> {
+        let whole = |path: &Path| fs::canonicalize(path).ok();
+        let path = whole(path)?;
+        let inside = path.parent()? == whole(&self.path)?;
+        inside.then(|| path.file_name()?.to_str().map(str::to_owned)).flatten()
+    }
+
     /// Content of a file in the folder, `None` if there is none.
     ///
     /// # Errors

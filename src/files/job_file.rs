@@ -22,7 +22,7 @@ pub fn read<T: DeserializeOwned>(path: &Path) -> Result<T, FileError> {
             .at_line(line as u64))
     })?;
     let remedy =
-        "see the keys in the guide; they are the names of the command-line options, with _ for -";
+        "keys are the names of the command-line options, with _ for -; see `ellbow sweep --help`";
     let at = |offset: usize, complaint: Complaint| {
         let before = &text[..offset.min(text.len())];
         let line = before.matches('\n').count();

@@ -91,6 +91,11 @@ impl Source {
         Text::new(self.bytes())
     }
 
+    /// A complaint that names this file.
+    pub fn name(&self, complaint: Complaint) -> Complaint {
+        complaint.in_file(&self.path)
+    }
+
     /// A complaint about this file.
     pub fn bad(&self, complaint: Complaint) -> FileError {
         FileError::bad(&self.path)(complaint)

@@ -172,11 +172,13 @@ impl Reader {
         self.columns = separator.split(line).len();
         if let Some((number, heading)) = &self.heading {
             let headings = Separator::of(heading).split(heading).len();
-            // Blanks may belong to a heading of several words.
-            if Separator::of(heading) != Separator::Blanks && headings != self.columns {
+            // Blanks may belong to a heading of several words, unless values are not set apart by them.
+            let words =
+                Separator::of(heading) == Separator::Blanks && separator == Separator::Blanks;
+            if !words && headings != self.columns {
                 return Err(Complaint::new(
                     format!("there are {headings} headings, but {} columns", self.columns),
-                    "give each column one heading, or none of them",
+                    "give each column one heading, or none of them; write decimals with a point",
                 )
                 .at_line(*number));
             }
@@ -233,7 +235,19 @@ impl Reader {
             nonfinite: self.nonfinite,
             ..Facts::default()
         };
-        Ok(Loaded { value, warnings: Vec::new(), facts })
+        // A column of numbers beside the data, or decimals written with a comma, look just like this.
+        let warnings = match self.columns {
+            1 => Vec::new(),
+            k => vec![
+                source
+                    .name(Complaint::new(
+                        format!("read as {k} data sets: every line has {k} values"),
+                        "none needed if so; else keep one column, and write decimals with a point",
+                    ))
+                    .into(),
+            ],
+        };
+        Ok(Loaded { value, warnings, facts })
     }
 }
 

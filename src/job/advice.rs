@@ -7,6 +7,14 @@ use crate::sweep::{Condition, conditioning};
 /// Adds the warnings that follow from the numbers of a run to those it has.
 pub fn add(run: &mut Run<'_>) {
     let (settings, system, facts) = (run.settings, run.system, run.facts);
+    if run.interrupted {
+        let tracks = run.sets.iter().map(|set| set.solved.len()).sum::<usize>();
+        let open = run.sets.iter().flat_map(|set| &set.solved);
+        let open = open.filter(|solved| !solved.stop.converged()).count();
+        run.warnings.push(format!(
+            "Stopped early by a time limit or a signal: {open} of {tracks} reconstructions had not converged. The same command runs again."
+        ));
+    }
     let smallest = run.strengths.iter().copied().fold(f64::INFINITY, f64::min);
     if let Some(condition) = run.condition.filter(|_| smallest == 0.0) {
         run.warnings.extend(condition_warning(condition));
@@ -40,9 +48,8 @@ pub fn add(run: &mut Run<'_>) {
                 ));
         }
     }
-    let penalised = system.columns.penalty_weights.as_ref();
     let unseen = facts.empty_columns.len();
-    if unseen > 0 && penalised.is_none() {
+    if unseen > 0 {
         run.warnings.push(format!(
                 "{unseen} of {} unknowns are touched by no datum: they stay at the reference and mean nothing.",
                 system.matrix.columns()

@@ -88,6 +88,7 @@ pub fn conduct(
     let Loaded { system, start, warnings } =
         load::load(&settings.source, strengths(settings).count())?;
     let facts = system.facts();
+    refuse_underflow(&system, &facts)?;
     let load_seconds = begun.elapsed().as_secs_f64();
     let work = Work { settings, system: &system, facts: &facts, start, begun };
     work.refuse_direct()?;
@@ -105,6 +106,32 @@ pub fn conduct(
     let read = warnings.iter().map(Warning::to_string);
     run.warnings = read.chain(std::mem::take(&mut run.warnings)).collect();
     Ok(Finished::New(Box::new(write::write(&folder, &run, inputs)?)))
+}
+
+/// Squares below this have lost digits, or all of them: the smallest f64 with all its digits is 2e-308.
+const SQUARE_MIN: f64 = 1e-290;
+
+/// Numbers so small that their squares vanish would pass for zeros, and zeros for a solution.
+fn refuse_underflow(system: &System, facts: &Facts) -> Result<(), JobError> {
+    let counts = |set: usize| {
+        (0..facts.rows).any(|i| system.data[[i, set]] != 0.0 && system.included(i, set))
+    };
+    let vanishes = |square: f64, any: bool| any && square < SQUARE_MIN;
+    let entries = facts.entries > facts.explicit_zeros;
+    for (set, of) in facts.sets.iter().enumerate() {
+        let what = if vanishes(of.weighted_data_square, counts(set)) {
+            "the weighted data"
+        } else if vanishes(of.weighted_matrix_square, entries) {
+            "the weighted entries of the matrix"
+        } else {
+            continue;
+        };
+        return Err(JobError::BadInput(Complaint::new(
+            format!("{what} are so small that their squares vanish in double precision"),
+            "state data, uncertainty and matrix in units that bring them nearer to 1",
+        )));
+    }
+    Ok(())
 }
 
 struct Work<'a> {
@@ -153,7 +180,14 @@ impl<'a> Work<'a> {
             run.bytes_per_pass = bare.bytes_per_pass(run.sets.len().min(sweep::LANES_MAX));
             self.exact_trace(&request, &mut run);
         }
-        refuse_breakdown(self.system, &run.sets)?;
+        if let Some(complaint) = breakdown(self.system, &run.sets) {
+            let broke = |s: &Solved| matches!(s.stop, Stop::NotFinite(_));
+            if run.sets.iter().all(|set| set.solved.iter().all(broke)) {
+                return Err(JobError::BrokeDown(complaint));
+            }
+            // What did come out is worth keeping.
+            run.warnings.push(complaint.to_string());
+        }
         if settings.command == Command::Sweep {
             run.choices = (0..run.sets.len())
                 .map(|set| choice(&run.sets[set], settings.rule, self.known_noise(set)))
@@ -298,10 +332,10 @@ impl<'a> Work<'a> {
         }
     }
 
-    /// Number of data of a set, where all have a stated σ.
+    /// Number of data of a set, where every weight is 1/σ.
     fn known_noise(&self, set: usize) -> Option<usize> {
-        let stated = self.settings.source.blocks.iter().all(|block| block.uncertainty.is_some());
-        stated.then_some(self.facts.sets[set].data)
+        let source = &self.settings.source;
+        source.weights_are_noise().then_some(self.facts.sets[set].data)
     }
 }
 
@@ -320,28 +354,28 @@ fn held(system: &System) -> Option<Vec<bool>> {
     held.iter().any(|held| *held).then_some(held)
 }
 
-fn refuse_breakdown(system: &System, sets: &[SetSweep]) -> Result<(), JobError> {
-    let fault = sets.iter().flat_map(|set| &set.solved).find_map(|solved| match solved.stop {
-        Stop::NotFinite(fault) => Some((solved, fault)),
+/// What broke down, where, in the data set that comes first; `None` if nothing did.
+fn breakdown(system: &System, sets: &[SetSweep]) -> Option<Complaint> {
+    let (solved, fault) = sets.iter().flat_map(|set| &set.solved).find_map(|s| match s.stop {
+        Stop::NotFinite(fault) => Some((s, fault)),
         _ => None,
-    });
-    let Some((solved, fault)) = fault else {
-        return Ok(());
-    };
+    })?;
     let place = match fault {
         Fault::Row(i) if i < system.matrix.rows() => system.row_name(i),
         Fault::Row(i) => format!("the penalty on {}", system.column_name(i - system.matrix.rows())),
         Fault::Column(j) => system.column_name(j),
         Fault::Norm => "a norm".into(),
     };
-    Err(JobError::BrokeDown(Complaint::new(
+    let set =
+        if sets.len() > 1 { format!(" of data set {}", solved.set + 1) } else { String::new() };
+    Some(Complaint::new(
         format!(
-            "a number stopped being finite in iteration {} at strength {}: {place}",
+            "a number{set} stopped being finite in iteration {} at strength {:e}: {place}",
             solved.iterations + 1,
             solved.strength
         ),
         "look at that place with `ellbow inspect`: values beyond 1e154 overflow when squared",
-    )))
+    ))
 }
 
 fn choice(set: &SetSweep, rule: Option<RuleName>, known_noise: Option<usize>) -> Choice {
@@ -368,8 +402,7 @@ fn choice(set: &SetSweep, rule: Option<RuleName>, known_noise: Option<usize>) ->
 /// χ² per degree of freedom of one track, where σ and the trace are known.
 pub fn chi_square(run: &Run<'_>, set: usize, place: usize) -> Option<f64> {
     let trace = run.traces.as_ref()?[set][place];
-    let stated = run.settings.source.blocks.iter().all(|block| block.uncertainty.is_some());
-    if !stated {
+    if !run.settings.source.weights_are_noise() {
         return None;
     }
     let solved = &run.sets[set].solved[place];

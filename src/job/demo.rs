@@ -59,10 +59,26 @@ pub fn find(name: &str) -> Result<&'static Problem, JobError> {
 /// Writes the problem's files and returns the place of its job file.
 ///
 /// # Errors
-/// A file cannot be written.
-pub fn write(problem: &Problem, place: &Path) -> Result<PathBuf, JobError> {
+/// A file cannot be written; one of its name is there with other content and `force` is not set.
+pub fn write(problem: &Problem, place: &Path, force: bool) -> Result<PathBuf, JobError> {
     let folder = Folder::create(place)?;
+    let mut missing = Vec::new();
     for (name, content) in problem.files {
+        match folder.read(name)? {
+            Some(there) if there == *content => {}
+            Some(_) if !force => {
+                return Err(JobError::Usage(
+                    Complaint::new(
+                        format!("the folder holds another {name}"),
+                        "name another folder with --out, or replace what is there with --force",
+                    )
+                    .in_file(place),
+                ));
+            }
+            _ => missing.push((name, content)),
+        }
+    }
+    for (name, content) in missing {
         folder.write(name, content)?;
     }
     Ok(folder.place("job.toml"))

@@ -9,7 +9,7 @@ use crate::operator::{Operator, RowWeights, StoredRows, Weighted};
 use crate::solve::certificate::{self, Frobenius};
 use crate::solve::fan::{Fan, Rotations};
 use crate::solve::lsqr::Lsqr;
-use crate::solve::pieces::TrackVectors;
+use crate::solve::pieces::{self, TrackVectors};
 use crate::solve::{Lane, Problem, Recurrence};
 use crate::sweep::{LANES_MAX, Strengths, range};
 use crate::system::System;
@@ -55,10 +55,12 @@ pub fn least_bytes(rows: usize, columns: usize, sets: usize, strengths: usize) -
     let lanes = sets.min(LANES_MAX);
     let tracks = strengths.saturating_mul(lanes);
     let models = sets.saturating_mul(strengths);
-    // Facts keep three vectors of either length; u; v and s; two vectors a track; all results.
+    // Facts keep three vectors of either length; u; v and s; two vectors a track, each in whole
+    // pieces; all results.
+    let padded = pieces::count(columns).saturating_mul(pieces::PIECE_ROWS);
     let iterating = of(rows, 3 + lanes)
         .saturating_add(of(columns, 3 + 2 * lanes))
-        .saturating_add(of(columns, 2 * tracks));
+        .saturating_add(of(padded, tracks.saturating_mul(Lsqr::VECTORS)));
     let results = of(rows, models).saturating_add(of(columns, models));
     iterating.max(results)
 }

@@ -31,7 +31,7 @@ pub struct Loaded {
 pub fn load(source: &Source, strengths: usize) -> Result<Loaded, JobError> {
     let mut reader = Reader { source, warnings: Vec::new() };
     let blocks = reader.blocks()?;
-    refuse_too_large(&blocks, strengths)?;
+    refuse_too_large(&blocks, source.grid.as_ref(), strengths)?;
     let rows: usize = blocks.iter().map(|block| block.matrix.rows()).sum();
     let columns = blocks[0].matrix.columns();
     let row_table = match &source.rows {
@@ -102,11 +102,19 @@ pub fn identities(source: &Source) -> Result<Vec<InputRecord>, JobError> {
 }
 
 /// A small file can declare billions of unknowns: better refused now than ended by the system.
-fn refuse_too_large(blocks: &[BlockPart], strengths: usize) -> Result<(), JobError> {
+fn refuse_too_large(
+    blocks: &[BlockPart],
+    grid: Option<&GridTable>,
+    strengths: usize,
+) -> Result<(), JobError> {
     let rows: usize = blocks.iter().map(|block| block.matrix.rows()).sum();
     let columns = blocks[0].matrix.columns();
     let sets = blocks[0].data.ncols();
-    let needed = forecast::least_bytes(rows, columns, sets, strengths);
+    // A mark for every cell while the active ones are checked, and model_grid.npy of every set.
+    let cells =
+        grid.map_or(0, |g| g.shape.iter().fold(1, |all: u64, n| all.saturating_mul(*n as u64)));
+    let gridded = cells.saturating_mul(8 * sets as u64 + 8);
+    let needed = forecast::least_bytes(rows, columns, sets, strengths).saturating_add(gridded);
     match memory::available_bytes() {
         Some(available) if needed > available => {
             let gigabytes = |bytes: u64| format!("{:.1} GB", bytes as f64 / 1e9);

@@ -114,6 +114,12 @@ pub struct Settings {
     pub(crate) force: bool,
 }
 
+/// Strengths whose squares an f64 holds with room to spare.
+const POSSIBLE: std::ops::RangeInclusive<f64> = 1e-150..=1e150;
+
+/// Most strengths of a sweep: a thousand a decade over ten decades, far more than any curve has features.
+const STRENGTHS_MAX: usize = 10_000;
+
 /// Folder for results when none is named.
 pub const OUT_DEFAULT: &str = "ellbow-result";
 
@@ -165,6 +171,12 @@ impl Source {
         })
     }
 
+    /// Whether every weight is 1/σ, so that squares of weighted residuals are in units of noise: σ
+    /// is stated for all data, and no block is weighted on top of it.
+    pub(crate) fn weights_are_noise(&self) -> bool {
+        self.blocks.iter().all(|block| block.uncertainty.is_some() && block.weight == 1.0)
+    }
+
     /// Every file the system is read from, each once, in a fixed order.
     pub fn files(&self) -> Vec<PathBuf> {
         let mut files = Vec::new();
@@ -210,6 +222,10 @@ fn blocks(typed: &Typed) -> Result<Vec<BlockSource>, JobError> {
         (Some(Data::Blocks(_)), Some(_)) => Err(usage(
             "both `matrix` and [[data]] blocks are given",
             "name the matrix of each block inside it, and none beside them",
+        )),
+        (Some(Data::Blocks(blocks)), None) if blocks.is_empty() => Err(usage(
+            "the list of data blocks is empty",
+            "add a [[data]] block with its matrix and data",
         )),
         (Some(Data::Blocks(blocks)), None) => blocks
             .iter()
@@ -309,11 +325,10 @@ impl Settings {
         if self.threads == Some(0) {
             return Err(usage("--threads 0", "give at least one thread, or leave the option out"));
         }
-        if self.noise_factor.is_some() && self.source.blocks.iter().any(|b| b.uncertainty.is_none())
-        {
+        if self.noise_factor.is_some() && !self.source.weights_are_noise() {
             return Err(usage(
                 "--noise-factor needs to know the noise",
-                "state the uncertainty of all data with --uncertainty",
+                "state the uncertainty of all data with --uncertainty, and give no block a weight",
             ));
         }
         if self.noise_factor.is_some() && self.strengths != StrengthsWanted::One(0.0) {
@@ -340,14 +355,27 @@ impl Settings {
 
 fn strengths(command: Command, typed: &Typed) -> Result<StrengthsWanted, JobError> {
     let range = typed.strengths.is_some() || typed.strength_count.is_some();
-    if typed.strength_count == Some(0) {
-        return Err(usage("--strength-count 0", "ask for at least one strength"));
+    if typed.strength_count.is_some_and(|count| !(1..=STRENGTHS_MAX).contains(&count)) {
+        return Err(usage(
+            format!("--strength-count {}", typed.strength_count.unwrap_or(0)),
+            format!("ask for at least one strength, and at most {STRENGTHS_MAX}"),
+        ));
     }
     match command {
         Command::Sweep if typed.strength.is_some() || typed.strength_from.is_some() => Err(usage(
             "a sweep has a range of strengths, not one",
             "use `ellbow solve` for one strength, or --strengths FROM..TO",
         )),
+        Command::Sweep
+            if typed
+                .strengths
+                .is_some_and(|r| !(POSSIBLE.contains(&r.from) && POSSIBLE.contains(&r.to))) =>
+        {
+            Err(usage(
+                "--strengths goes where squares are beyond double precision",
+                "stay between 1e-150 and 1e150",
+            ))
+        }
         Command::Sweep => Ok(match typed.strengths {
             Some(range) => StrengthsWanted::Range { range, count: typed.strength_count },
             None => StrengthsWanted::Found { count: typed.strength_count },
@@ -357,12 +385,14 @@ fn strengths(command: Command, typed: &Typed) -> Result<StrengthsWanted, JobErro
             "use `ellbow sweep` to look at many strengths and choose",
         )),
         Command::Solve => match (typed.strength, &typed.strength_from) {
-            (Some(strength), None) if strength >= 0.0 && strength.is_finite() => {
+            (Some(strength), None) if strength == 0.0 || POSSIBLE.contains(&strength) => {
                 Ok(StrengthsWanted::One(strength))
             }
             (Some(strength), None) => Err(usage(
-                format!("--strength {strength} is negative or not finite"),
-                "give a number from 0 up",
+                format!(
+                    "--strength {strength:e} is negative, or its square is beyond double precision"
+                ),
+                "give 0, or a number from 1e-150 to 1e150",
             )),
             (None, Some(run)) => Ok(StrengthsWanted::One(strength_of(run)?)),
             (Some(_), Some(_)) => Err(usage(

@@ -139,7 +139,7 @@ pub struct Typed {
     #[arg(long, value_name = "D", help_heading = "Solver")]
     pub time_limit: Option<DurationText>,
 
-    /// Folder for the results, made if absent
+    /// Folder for the results, made if absent [default: ellbow-result]
     #[arg(long, value_name = "DIR", help_heading = "Running")]
     pub out: Option<PathBuf>,
 

@@ -18,7 +18,7 @@ use crate::solve::Solved;
 use crate::system::System;
 
 /// Every file that a run may write besides its log; the one that vouches for the others first.
-const RESULTS: [&str; 8] = [
+pub const RESULTS: [&str; 8] = [
     "summary.json",
     "model.npy",
     "residual.npy",
@@ -98,6 +98,9 @@ pub fn log(folder: &Folder, mut event: Value) -> Result<(), JobError> {
     Ok(folder.append("log.jsonl", &format!("{event}\n"))?)
 }
 
+/// The stop that outranks all others.
+const BROKE_DOWN: &str = "not-finite";
+
 /// Seconds since 1970.
 fn unix_seconds() -> u64 {
     let now = std::time::SystemTime::now();
@@ -147,7 +150,7 @@ fn table(run: &Run<'_>) -> Vec<SweepRow> {
         for (place, solved) in swept.solved.iter().enumerate() {
             let trace = run.traces.as_ref().map(|traces| traces[set][place]);
             rows.push(SweepRow {
-                data_set: set,
+                data_set: set + 1,
                 strength: solved.strength,
                 residual_norm: solved.residual_norm,
                 penalty_norm: solved.penalty_norm,
@@ -178,7 +181,7 @@ fn sweep_csv(rows: &[SweepRow], sets: usize) -> String {
     );
     for row in rows {
         if sets > 1 {
-            let _ = write!(out, "{},", row.data_set + 1);
+            let _ = write!(out, "{},", row.data_set);
         }
         // An exact trace has no sampling error; the robust and risk functions belong to rules to come.
         let error = row.effective_parameters.map(|_| 0.0);
@@ -212,14 +215,14 @@ fn history(out: &mut dyn std::io::Write, run: &Run<'_>) -> std::io::Result<()> {
         let model_norm = if plain { cell(Some(row.penalty_norm)) } else { String::new() };
         writeln!(
             out,
-            "{},{:e},model,{},{},{},{},{:e},{:.6}",
+            "{},{:e},model,{},{},{},{},{},{:.6}",
             row.set + 1,
             row.strength,
             row.iteration,
             cell(Some(row.residual_norm)),
             cell(Some(row.penalty_norm)),
             model_norm,
-            row.gradient_norm,
+            cell(Some(row.gradient_norm)),
             row.seconds
         )?;
     }
@@ -327,11 +330,12 @@ fn together(sets: &[SetRecord]) -> ResultRecord {
         }
         all.relative_gradient = all.relative_gradient.max(one.relative_gradient);
         all.iterations = all.iterations.max(one.iterations);
-        if all.stop.converged && !one.stop.converged {
+        let broke = one.stop.reason == BROKE_DOWN;
+        if broke || (all.stop.converged && !one.stop.converged) {
             all.stop = one.stop.clone();
         }
         all.model_error_bound =
-            all.model_error_bound.zip(one.model_error_bound).map(|(a, b)| a.max(b));
+            all.model_error_bound.zip(one.model_error_bound).map(|(a, b)| a.hypot(b));
     }
     if sets.len() > 1 {
         (all.effective_parameters, all.chi_square_per_dof) = (None, None);
@@ -412,7 +416,7 @@ fn blocks(run: &Run<'_>) -> Vec<BlockRecord> {
             weight: block.weight,
             data,
             residual_norm: square.sqrt(),
-            chi_square_per_datum: (system.uncertainty.is_some() && data > 0)
+            chi_square_per_datum: (run.settings.source.weights_are_noise() && data > 0)
                 .then(|| square / data as f64),
         }
     };

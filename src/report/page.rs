@@ -34,10 +34,14 @@ fn head(out: &mut String, summary: &Summary) {
         1 => String::new(),
         k => format!(", {k} data sets"),
     };
+    let used = match system.rows - system.data {
+        0 => system.rows.to_string(),
+        left_out => format!("{} ({left_out} left out)", system.data),
+    };
     let _ = writeln!(
         out,
         "System   {} data, {} unknowns, {} entries ({}){sets}",
-        system.rows, system.columns, system.entries, system.storage
+        used, system.columns, system.entries, system.storage
     );
     let _ = writeln!(
         out,
@@ -80,11 +84,14 @@ fn result(out: &mut String, summary: &Summary, result: &ResultRecord) {
         unit(&summary.system.model_unit)
     );
     let _ = writeln!(out, "Relative gradient   {:>14}", number(Some(result.relative_gradient)));
-    let _ = writeln!(
-        out,
-        "Orthogonality       {:>14}   of the residual to the matrix, in norm",
-        number(Some(result.orthogonality))
-    );
+    // With a strength the residual is not orthogonal to the matrix, and need not be.
+    if summary.strength == Some(0.0) {
+        let _ = writeln!(
+            out,
+            "Orthogonality       {:>14}   of the residual to the matrix, in norm",
+            number(Some(result.orthogonality))
+        );
+    }
     if let Some(chi_square) = result.chi_square_per_dof {
         let _ = writeln!(
             out,
@@ -140,7 +147,7 @@ fn sweep(out: &mut String, summary: &Summary) {
         let Some(choice) = &set.choice else { continue };
         let _ = writeln!(out, "Data set {}", set.data_set);
         let rows: Vec<SweepRow> =
-            summary.sweep.iter().filter(|row| row.data_set + 1 == set.data_set).cloned().collect();
+            summary.sweep.iter().filter(|row| row.data_set == set.data_set).cloned().collect();
         table(out, &rows, choice);
         verdict(out, choice);
         out.push('\n');

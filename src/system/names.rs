@@ -36,6 +36,14 @@ impl System {
 }
 
 impl ColumnTable {
+    /// Tells of an unknown whether the one constant that stands for the model is its value: of the
+    /// cells where there are any, else of all.
+    pub fn taking_constant(&self) -> impl Fn(usize) -> bool + Sync + '_ {
+        let cells = |kinds: &Vec<String>| kinds.iter().any(|k| k.is_empty() || k == "cell");
+        let all = !self.kinds.as_ref().is_some_and(cells);
+        move |j| all || self.is_cell(j)
+    }
+
     /// Whether unknown `j` is one of the grid's cells: of kind `cell`, or of no kind.
     pub fn is_cell(&self, j: usize) -> bool {
         self.kinds.as_ref().is_none_or(|kinds| kinds[j].is_empty() || kinds[j] == "cell")

@@ -18,7 +18,8 @@ pub(super) struct Fit<'a> {
     pub weights: &'a RowWeights,
 }
 
-/// One constant value for all free unknowns, fitted to one data set.
+/// One constant value for all free cells (unknowns of another kind, say station terms, stay 0: they
+/// have another unit), fitted to one data set.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub(super) struct Constant {
     /// c = Σ wᵢ² sᵢ bᵢ / Σ wᵢ² sᵢ², sᵢ the sum of row i; model unit.
@@ -29,7 +30,7 @@ pub(super) struct Constant {
     pub deviation: f64,
 }
 
-/// Sums of the rows over the free unknowns, and what the fixed ones contribute to each datum.
+/// Sums of the rows over the free cells, and what the fixed ones contribute to each datum.
 pub(super) struct RowSums {
     pub free: Vec<f64>,
     /// `None` where nothing is fixed.
@@ -40,11 +41,13 @@ impl RowSums {
     /// One visit of the rows.
     pub fn of(matrix: &StoredRows, columns: &ColumnTable) -> Self {
         let held = columns.fixed.as_ref().filter(|values| values.iter().any(|v| !v.is_nan()));
+        let takes = columns.taking_constant();
         let sum = |i: usize| {
             let (mut free, mut fixed) = (0.0, 0.0);
             for (j, a) in matrix.row(i).entries() {
                 match held.map(|values| values[j]).filter(|value| !value.is_nan()) {
-                    None => free += a,
+                    None if takes(j) => free += a,
+                    None => {}
                     Some(value) => fixed += a * value,
                 }
             }
@@ -146,6 +149,7 @@ fn check_values(
 
 fn fitted(columns: &ColumnTable, fit: &Fit) -> Result<Array2<f64>, SystemError> {
     let sums = RowSums::of(fit.matrix, columns);
+    let takes = columns.taking_constant();
     let sets = fit.data.ncols();
     let mut values = Array2::zeros((fit.matrix.columns(), sets));
     for set in 0..sets {
@@ -157,7 +161,11 @@ fn fitted(columns: &ColumnTable, fit: &Fit) -> Result<Array2<f64>, SystemError> 
             let remedy = "give the reference as a number or a file, or leave it out";
             return Err(SystemError::Reference(Complaint::new(cause, remedy)));
         };
-        values.column_mut(set).fill(constant.value);
+        for (j, value) in values.column_mut(set).iter_mut().enumerate() {
+            if takes(j) {
+                *value = constant.value;
+            }
+        }
     }
     Ok(values)
 }
