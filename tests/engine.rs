@@ -364,3 +364,108 @@ fn same_bits_for_any_number_of_threads() {
         }
     }
 }
+
+/// An ill-conditioned 80×60 system: columns fade by ten over the width.
+fn fading(sets: usize) -> Case {
+    let mut case = case(80, 60, sets, 31);
+    let (matrix, _) = random_system(80, 60, 31);
+    let mut dense = vec![0.0; 80 * 60];
+    for i in 0..80 {
+        for (j, a) in matrix.row(i).entries() {
+            dense[i * 60 + j] = a * 10f64.powf(-3.0 * j as f64 / 60.0);
+        }
+    }
+    case.matrix = StoredRows::from_dense(80, 60, &dense);
+    case
+}
+
+#[test]
+fn a_lane_has_the_same_bits_alone_and_beside_others() {
+    let case = fading(3);
+    for method in METHODS {
+        let of = |lanes: Vec<Lane>| solve(&case, None, None, false, None, lanes, method, 1e-9);
+        let lane = |set: usize| Lane { set, strengths: vec![[1e-3, 0.3, 1e-2][set]] };
+        let together = of((0..3).map(lane).collect());
+        for set in 0..3 {
+            let alone = of(vec![lane(set)]);
+            let (a, b) = (&alone.solved[0], &together.solved[set]);
+            assert_eq!((a.iterations, &a.model), (b.iterations, &b.model), "{method:?} {set}");
+            assert!(a.stop.converged(), "{method:?} {set}: {:?}", a.stop);
+        }
+    }
+}
+
+#[test]
+fn history_says_nothing_where_steps_are_not_the_model() {
+    let case = case(60, 40, 1, 33);
+    let scales = vec![2.0; 40];
+    let start = Array2::from_elem((40, 1), 0.5);
+    let lanes = || vec![Lane { set: 0, strengths: vec![0.0] }];
+    let scaled = solve(&case, Some(&scales), None, false, None, lanes(), Method::Lsqr, 1e-10);
+    let started = solve(&case, None, None, false, Some(start.view()), lanes(), Method::Lsqr, 1e-10);
+    for outcome in [&scaled, &started] {
+        let last = outcome.history.last().unwrap();
+        assert!(last.penalty_norm.is_nan());
+        let residual = outcome.solved[0].residual_norm;
+        assert!((last.residual_norm / residual - 1.0).abs() < 1e-10, "{last:?}");
+    }
+    assert!(scaled.history.iter().all(|row| row.gradient_norm.is_nan()));
+    assert!(started.history.iter().all(|row| row.gradient_norm.is_finite()));
+}
+
+#[test]
+fn of_all_solutions_the_nearest_is_found_by_every_way() {
+    // x₁ + 1000 x₂ = 1: the shortest is (1, 1000)/1000001.
+    let matrix = StoredRows::from_dense(1, 2, &[1.0, 1000.0]);
+    let data = Array2::from_elem((1, 1), 1.0);
+    let weights = RowWeights::Ones;
+    for (method, penalty) in METHODS.iter().flat_map(|&m| [(m, None), (m, Some([1.0, 10.0]))]) {
+        let request = ellbow::sweep::Request {
+            matrix: &matrix,
+            weights: &weights,
+            data: data.view(),
+            reference: None,
+            start: None,
+            penalty: penalty.as_ref().map(|p| p.as_slice()),
+            held: None,
+            method,
+            scaling: ellbow::sweep::Scaling::Auto,
+            strengths: ellbow::sweep::Strengths::Given(vec![0.0]),
+            rules: rules(1e-12),
+        };
+        let found = &ellbow::sweep::run(&request, &Unwatched).sets[0].solved[0].model;
+        let exact = &ellbow::sweep::dense::run(&request).unwrap().sets[0].solved[0].model;
+        // min x₁² + p²x₂²: x ∝ (1, 1000/p²).
+        let p2 = penalty.map_or(1.0, |p| p[1] * p[1]);
+        let scale = 1.0 / (1.0 + 1e6 / p2);
+        let closed = [scale, scale * 1000.0 / p2];
+        assert!(distance(found, &closed) < 1e-12, "{method:?} {penalty:?}: {found:?}");
+        assert!(distance(exact, &closed) < 1e-12, "direct {penalty:?}: {exact:?}");
+    }
+}
+
+#[test]
+fn a_range_is_the_same_by_every_method() {
+    let case = case(60, 40, 2, 34);
+    let penalty: Vec<f64> = (0..40).map(|j| if j % 2 == 0 { 2.0 } else { 0.5 }).collect();
+    let of = |method| {
+        let request = ellbow::sweep::Request {
+            matrix: &case.matrix,
+            weights: &case.weights,
+            data: case.data.view(),
+            reference: case.reference.as_ref(),
+            start: None,
+            penalty: Some(&penalty),
+            held: None,
+            method,
+            scaling: ellbow::sweep::Scaling::Auto,
+            strengths: ellbow::sweep::Strengths::Found { count: Some(3) },
+            rules: rules(1e-8),
+        };
+        ellbow::sweep::run(&request, &Unwatched).strengths
+    };
+    let (lsqr, cgls) = (of(Method::Lsqr), of(Method::Cgls));
+    for (a, b) in lsqr.iter().zip(&cgls) {
+        assert!((a / b - 1.0).abs() < 1e-12, "{lsqr:?} {cgls:?}");
+    }
+}

@@ -153,7 +153,8 @@ fn finish(
         pulled.iter().enumerate().map(|(j, s)| if free(j) { *s } else { 0.0 }).collect();
     let gradient: Vec<f64> = (0..model.len())
         .map(|j| {
-            let pull = strength * strength * problem.penalty_factor(j) * penalty[j];
+            // In this order λ² never stands alone, where it could overflow.
+            let pull = (strength * problem.penalty_factor(j)) * (strength * penalty[j]);
             if free(j) { pulled[j] - pull } else { 0.0 }
         })
         .collect();

@@ -14,48 +14,17 @@
 //! 19:720, 1998 (attainable accuracy).
 
 use crate::operator::{Frame, Operator, Pass, Scratch};
+use crate::solve::cgls_lane::LaneState;
 use crate::solve::pieces;
 use crate::solve::problem::Problem;
 use crate::solve::process::Process;
-use crate::solve::stop::{self, Fault, StopRules};
+use crate::solve::stop::{Fault, StopRules};
 use crate::solve::{Estimate, Recurrence, Stepped};
 
 /// Steps between refreshes: 2 % more passes.
 pub const REFRESH_STEPS: usize = 50;
 
-/// A recomputed gradient above this many times the recurred one has drifted: the direction is
-/// started anew.
-const DRIFT: f64 = 2.0;
-
-/// Drifted refreshes in a row, none of which halved the gradient, that mean the floor is reached.
-const IDLE_REFRESHES_MAX: u32 = 3;
-
-struct LaneState {
-    damping: f64,
-    frobenius: f64,
-    data_norm: f64,
-    /// γ = ‖g‖².
-    gamma: f64,
-    /// pᵀg and ‖p‖².
-    slope: f64,
-    direction_squared: f64,
-    /// ‖[r; λy]‖², and what it was when last recomputed: the recurred one is a difference from it.
-    total_squared: f64,
-    total_squared_refreshed: f64,
-    /// The last direction was one that the operator takes to nothing but rounding.
-    null_direction: bool,
-    /// ‖y‖².
-    model_squared: f64,
-    trusted: bool,
-    smallest: f64,
-    idle: u32,
-    floor: bool,
-    fault: Option<Fault>,
-    /// y, once the lane has left the blocks.
-    packed: Option<Vec<f64>>,
-}
-
-/// CGLS on blocks of lanes, one strength a lane: six blocks (u and b̃ of m rows, p, t, g, y of n).
+/// CGLS on blocks of lanes, one strength a lane: u and b̃ of m rows; p, t, g, −x and y of n.
 pub struct Cgls<'a> {
     problem: &'a Problem<'a>,
     operator: Box<dyn Operator + 'a>,
@@ -68,8 +37,10 @@ pub struct Cgls<'a> {
     p: Vec<f64>,
     /// Product t, or the recomputed gradient.
     t: Vec<f64>,
-    /// Gradient; during a refresh −x.
+    /// Gradient.
     g: Vec<f64>,
+    /// −x, the v of a refresh.
+    x: Vec<f64>,
     y: Vec<f64>,
     squares: Vec<f64>,
     sums: Vec<f64>,
@@ -79,7 +50,8 @@ pub struct Cgls<'a> {
     factor: Vec<f64>,
     fresh: Vec<f64>,
     scratch: Scratch,
-    since_refresh: usize,
+    /// Lanes whose own claim or count asks for the refresh being made.
+    due: Vec<bool>,
     rules: &'a StopRules,
 }
 
@@ -100,7 +72,8 @@ impl<'a> Cgls<'a> {
             right,
             p: vec![0.0; n * k],
             t: vec![0.0; n * k],
-            g: problem.negative_origins(),
+            g: vec![0.0; n * k],
+            x: problem.negative_origins(),
             y: vec![0.0; n * k],
             squares: vec![0.0; k],
             sums: vec![0.0; 2 * pieces::count(n) * k],
@@ -112,7 +85,7 @@ impl<'a> Cgls<'a> {
             scratch: operator.scratch(k),
             operator,
             problem,
-            since_refresh: 0,
+            due: vec![true; k],
             rules,
         }
     }
@@ -121,9 +94,9 @@ impl<'a> Cgls<'a> {
         self.live.len()
     }
 
-    /// u ← Ã v + …, t ← Ãᵀu with v the direction p, or −x (held in g) for a refresh.
+    /// u ← Ã v + …, t ← Ãᵀu with v the direction p, or −x for a refresh.
     fn pass(&mut self, frame: Frame) {
-        let v = if frame == Frame::Step { &self.p } else { &self.g };
+        let v = if frame == Frame::Step { &self.p } else { &self.x };
         self.operator.pass(Pass {
             frame,
             sets: &self.sets,
@@ -137,45 +110,58 @@ impl<'a> Cgls<'a> {
         });
     }
 
-    /// g ← Ãᵀ(b − A x) − λ²y by definition, with x from y.
+    /// g ← Ãᵀ(b − A x) − λ²y by definition, with x from y, in the lanes that are due. The others ride
+    /// along and keep what they have: a lane's course does not depend on its neighbours.
     fn refresh(&mut self) {
         self.u.copy_from_slice(&self.right);
         self.alpha.fill(-1.0);
         self.pass(Frame::Start);
         let k = self.width();
-        let (lanes, live) = (&self.lanes, &self.live);
-        self.g.copy_from_slice(&self.t);
-        pieces::for_each(k, &mut self.g, &self.y, &mut self.sums, |g, y, sums| {
+        let (lanes, live, due) = (&self.lanes, &self.live, &self.due);
+        // t ← t − λ²y and its norm, then into g where it is due.
+        pieces::for_each(k, &mut self.t, &self.y, &mut self.sums, |t, y, sums| {
             sums.fill(0.0);
-            for (g, y) in g.chunks_exact_mut(k).zip(y.chunks_exact(k)) {
+            for (t, y) in t.chunks_exact_mut(k).zip(y.chunks_exact(k)) {
                 for l in 0..k {
-                    g[l] -= lanes[live[l]].damping.powi(2) * y[l];
-                    sums[2 * l] += g[l] * g[l];
+                    t[l] -= lanes[live[l]].damping.powi(2) * y[l];
+                    sums[2 * l] += t[l] * t[l];
                     sums[2 * l + 1] += y[l] * y[l];
                 }
             }
         });
+        for (g, t) in self.g.chunks_mut(k).zip(self.t.chunks(k)) {
+            for l in 0..k {
+                if due[l] {
+                    g[l] = t[l];
+                }
+            }
+        }
         for place in 0..k {
+            (self.fresh[place], self.factor[place]) = (0.0, 1.0);
+            if !self.due[place] {
+                continue;
+            }
             let gamma = pieces::total(&self.sums, 2 * k, 2 * place);
             let model_squared = pieces::total(&self.sums, 2 * k, 2 * place + 1);
             let squared = self.squares[place];
             let finite = gamma.is_finite() && squared.is_finite();
-            let fault = if finite { None } else { Some(self.locate(place)) };
+            let fault =
+                if finite { None } else { Some(pieces::locate(&self.u, &self.t, k, place)) };
             let lane = &mut self.lanes[self.live[place]];
             lane.fault = lane.fault.or(fault);
-            let kept = lane.accept_refresh(gamma, model_squared, squared);
-            (self.fresh[place], self.factor[place]) = if kept { (0.0, 1.0) } else { (1.0, 0.0) };
+            if !lane.accept_refresh(gamma, model_squared, squared) {
+                (self.fresh[place], self.factor[place]) = (1.0, 0.0);
+            }
         }
-        self.since_refresh = 0;
     }
 
-    /// g ← −x = −(x₀ + D y), the v of a refresh.
+    /// −x = −(x₀ + D y), the v of a refresh.
     fn hold_negative_model(&mut self) {
         let k = self.width();
-        for (j, (g, y)) in self.g.chunks_mut(k).zip(self.y.chunks(k)).enumerate() {
+        for (j, (x, y)) in self.x.chunks_mut(k).zip(self.y.chunks(k)).enumerate() {
             let d = self.problem.matrix.scale(j);
             for l in 0..k {
-                g[l] = -(self.problem.origin_at(j, self.sets[l]) + d * y[l]);
+                x[l] = -(self.problem.origin_at(j, self.sets[l]) + d * y[l]);
             }
         }
     }
@@ -237,89 +223,26 @@ impl<'a> Cgls<'a> {
         for place in 0..k {
             let gamma = pieces::total(&self.sums, 2 * k, 2 * place);
             let finite = gamma.is_finite() && self.squares[place].is_finite();
-            let fault = if finite { None } else { Some(self.locate(place)) };
+            let fault =
+                if finite { None } else { Some(pieces::locate(&self.u, &self.t, k, place)) };
             let lane = &mut self.lanes[self.live[place]];
             lane.model_squared = pieces::total(&self.sums, 2 * k, 2 * place + 1);
             lane.fault = lane.fault.or(fault);
             lane.trusted = false;
+            lane.since_refresh += 1;
             self.factor[place] = if lane.gamma > 0.0 { gamma / lane.gamma } else { 0.0 };
             lane.gamma = gamma;
         }
     }
 
-    fn refresh_due(&self) -> bool {
-        self.since_refresh >= REFRESH_STEPS
-            || (self.since_refresh > 0
-                && self.live.iter().any(|&lane| self.lanes[lane].claims(self.rules)))
-    }
-
-    fn locate(&self, place: usize) -> Fault {
-        let k = self.width();
-        let first = |block: &[f64]| block.chunks(k).position(|row| !row[place].is_finite());
-        if let Some(row) = first(&self.u) {
-            Fault::Row(row)
-        } else if let Some(column) = first(&self.t) {
-            Fault::Column(column)
-        } else {
-            Fault::Norm
+    /// Marks the lanes that want a refresh; whether any does.
+    fn mark_due(&mut self) -> bool {
+        for (due, &lane) in self.due.iter_mut().zip(&self.live) {
+            let lane = &self.lanes[lane];
+            *due = lane.since_refresh >= REFRESH_STEPS
+                || (lane.since_refresh > 0 && lane.claims(self.rules));
         }
-    }
-}
-
-impl LaneState {
-    fn new(damping: f64, frobenius: f64) -> Self {
-        Self {
-            damping,
-            frobenius,
-            data_norm: 0.0,
-            gamma: 0.0,
-            slope: 0.0,
-            direction_squared: 0.0,
-            total_squared: 0.0,
-            total_squared_refreshed: 0.0,
-            null_direction: false,
-            model_squared: 0.0,
-            trusted: true,
-            smallest: f64::INFINITY,
-            idle: 0,
-            floor: false,
-            fault: None,
-            packed: None,
-        }
-    }
-
-    /// The recurred gradient or residual says that the lane is done.
-    fn claims(&self, rules: &StopRules) -> bool {
-        let total = self.total_squared.max(0.0).sqrt();
-        // Every step since took a rounding error of the starting value: no digit is left.
-        let lost = 2.0 * REFRESH_STEPS as f64 * f64::EPSILON * self.total_squared_refreshed;
-        self.null_direction
-            || self.total_squared <= lost
-            || self.gamma.sqrt()
-                <= rules.gradient_tolerance.max(f64::EPSILON) * self.frobenius * total
-            || total <= self.rounding().max(rules.residual_tolerance * self.data_norm)
-    }
-
-    fn rounding(&self) -> f64 {
-        stop::rounding_of_residual(self.frobenius, self.model_squared.sqrt(), self.data_norm)
-    }
-
-    /// Takes recomputed sums; returns whether the direction can be kept.
-    fn accept_refresh(&mut self, gamma: f64, model_squared: f64, residual_squared: f64) -> bool {
-        let (recomputed, recurred) = (gamma.sqrt(), self.gamma.sqrt());
-        let drifted = recomputed > DRIFT * recurred || self.null_direction;
-        let progressed = recomputed <= 0.5 * self.smallest;
-        self.idle = if drifted && !progressed { self.idle + 1 } else { 0 };
-        self.smallest = self.smallest.min(recomputed);
-        self.gamma = gamma;
-        self.model_squared = model_squared;
-        self.total_squared = residual_squared + self.damping.powi(2) * model_squared;
-        self.total_squared_refreshed = self.total_squared;
-        self.null_direction = false;
-        self.trusted = true;
-        self.floor =
-            self.idle >= IDLE_REFRESHES_MAX || recomputed <= 0.1 * self.frobenius * self.rounding();
-        !drifted
+        self.due.contains(&true)
     }
 }
 
@@ -336,7 +259,7 @@ impl Recurrence for Cgls<'_> {
     }
 
     fn step(&mut self) -> Stepped {
-        if self.refresh_due() {
+        if self.mark_due() {
             self.hold_negative_model();
             self.refresh();
             self.turn_direction();
@@ -347,7 +270,6 @@ impl Recurrence for Cgls<'_> {
         self.advance();
         self.fresh.fill(1.0);
         self.turn_direction();
-        self.since_refresh += 1;
         Stepped::Iteration
     }
 
@@ -394,8 +316,15 @@ impl Recurrence for Cgls<'_> {
             let y = self.y.chunks(k).map(|row| row[place]).collect();
             self.lanes[self.live[place]].packed = Some(y);
         }
-        let blocks =
-            [&mut self.right, &mut self.u, &mut self.p, &mut self.t, &mut self.g, &mut self.y];
+        let blocks = [
+            &mut self.right,
+            &mut self.u,
+            &mut self.p,
+            &mut self.t,
+            &mut self.g,
+            &mut self.x,
+            &mut self.y,
+        ];
         for block in blocks {
             pieces::pack(block, k, &kept);
         }
@@ -406,6 +335,7 @@ impl Recurrence for Cgls<'_> {
             pieces::pack(list, k, &kept);
         }
         self.sums.truncate(2 * pieces::count(self.problem.unknowns()) * kept.len());
+        self.due.truncate(kept.len());
         self.sets = kept.iter().map(|&place| self.sets[place]).collect();
         self.live = kept.iter().map(|&place| self.live[place]).collect();
     }
@@ -433,7 +363,8 @@ impl Recurrence for Cgls<'_> {
     }
 
     fn workspace_bytes(&self) -> u64 {
-        let blocks = [&self.right, &self.u, &self.p, &self.t, &self.g, &self.y, &self.sums];
+        let blocks =
+            [&self.right, &self.u, &self.p, &self.t, &self.g, &self.x, &self.y, &self.sums];
         blocks.iter().map(|block| 8 * block.capacity() as u64).sum::<u64>()
             + self.operator.scratch_bytes(self.lanes.len())
     }

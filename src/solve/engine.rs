@@ -111,8 +111,18 @@ pub fn run<'p>(
         }
         Method::Cgls => Box::new(Cgls::new(problem, &of_lane(true), rules)),
     };
-    Run { problem, rules, watch, frobenius, recurrence, tracks: Vec::new(), history: Vec::new() }
-        .go(scout)
+    Run {
+        problem,
+        rules,
+        watch,
+        frobenius,
+        recurrence,
+        penalty_is_step: problem.penalty_is_step(),
+        steps_are_model: problem.steps_are_model(),
+        tracks: Vec::new(),
+        history: Vec::new(),
+    }
+    .go(scout)
 }
 
 fn check(problem: &Problem<'_>, method: Method, scouting: bool) {
@@ -147,6 +157,10 @@ struct Run<'a, 'p> {
     watch: &'a dyn Watch,
     frobenius: Frobenius,
     recurrence: Box<dyn Recurrence + 'p>,
+    /// ‖y‖ is ‖P(x − x_ref)‖.
+    penalty_is_step: bool,
+    /// D = 1: the gradient in y is that in x.
+    steps_are_model: bool,
     tracks: Vec<TrackState>,
     history: Vec<HistoryRow>,
 }
@@ -188,6 +202,10 @@ impl Run<'_, '_> {
             let stepped = self.recurrence.step();
             iteration += u64::from(stepped != Stepped::Refresh);
             passes += u64::from(stepped != Stepped::Replay);
+            if stepped == Stepped::Replay {
+                // Lanes that ended meanwhile could not leave before.
+                self.recurrence.pack();
+            }
             self.note(iteration, passes, stepped, begun.elapsed());
         }
         let workspace_bytes = self.recurrence.workspace_bytes();
@@ -303,15 +321,17 @@ impl Run<'_, '_> {
             if stepped == Stepped::Refresh {
                 continue;
             }
-            let split = !self.problem.stacked || track.strength == 0.0;
-            let known = |norm: f64| if split { norm } else { f64::NAN };
+            // What a norm in the steps' variables says of the model depends on what these are.
+            let known = |norm: f64, is: bool| if is { norm } else { f64::NAN };
+            let split = self.penalty_is_step;
+            let strength = if split { track.strength } else { 0.0 };
             self.history.push(HistoryRow {
                 set: track.set,
                 strength: track.strength,
                 iteration,
-                residual_norm: known(estimate.residual(if split { track.strength } else { 0.0 })),
-                penalty_norm: known(estimate.penalty),
-                gradient_norm: estimate.gradient,
+                residual_norm: known(estimate.residual(strength), split || track.strength == 0.0),
+                penalty_norm: known(estimate.penalty, split),
+                gradient_norm: known(estimate.gradient, self.steps_are_model),
                 seconds,
             });
         }
@@ -389,9 +409,7 @@ fn resolve(track: &TrackState, step_norm: f64, certified: Certified, rules: &Sto
     let candidate = track.stop.expect("a stopped track");
     solved.stop = match candidate {
         Stop::NotFinite(_) | Stop::ZeroData => candidate,
-        _ if !(solved.model_norm.is_finite() && solved.residual_norm.is_finite()) => {
-            Stop::NotFinite(Fault::Norm)
-        }
+        _ if !solved.is_finite() => Stop::NotFinite(Fault::Norm),
         Stop::Residual
             if solved.residual_norm <= 10.0 * rules.residual_tolerance * solved.data_norm =>
         {
@@ -402,10 +420,18 @@ fn resolve(track: &TrackState, step_norm: f64, certified: Certified, rules: &Sto
         {
             candidate
         }
-        Stop::Gradient | Stop::Stalled if tolerance > 0.0 && relative <= 10.0 * tolerance => {
+        _ if null => Stop::ExactFit,
+        // Whatever was hoped for: this is the definition of converged.
+        Stop::Gradient
+        | Stop::Stalled
+        | Stop::ExactFit
+        | Stop::Residual
+        | Stop::NoiseLevel
+        | Stop::Floor
+            if tolerance > 0.0 && relative <= 10.0 * tolerance =>
+        {
             Stop::Gradient
         }
-        _ if null => Stop::ExactFit,
         Stop::IterationLimit | Stop::Interrupted(_) if tolerance > 0.0 && relative <= tolerance => {
             Stop::Gradient
         }

@@ -199,7 +199,8 @@ impl<'a> GolubKahan<'a> {
             return;
         }
         let finite = alpha.is_finite() && self.squares[place].is_finite();
-        let fault = if finite { None } else { Some(self.locate(place)) };
+        let fault =
+            if finite { None } else { Some(pieces::locate(&self.u, &self.s, self.width(), place)) };
         let lane = &mut self.lanes[index];
         lane.fault = fault;
         lane.ended |= alpha <= lane.null;
@@ -207,18 +208,6 @@ impl<'a> GolubKahan<'a> {
         lane.process.alphas.push(if running { alpha } else { 0.0 });
         if running {
             self.scale[place] = 1.0 / alpha;
-        }
-    }
-
-    fn locate(&self, place: usize) -> Fault {
-        let k = self.width();
-        let first = |block: &[f64]| block.chunks(k).position(|row| !row[place].is_finite());
-        if let Some(row) = first(&self.u) {
-            Fault::Row(row)
-        } else if let Some(column) = first(&self.s) {
-            Fault::Column(column)
-        } else {
-            Fault::Norm
         }
     }
 

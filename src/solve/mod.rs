@@ -9,6 +9,7 @@
 
 pub mod certificate;
 pub mod cgls;
+mod cgls_lane;
 pub mod direct;
 pub mod engine;
 pub mod fan;

@@ -3,6 +3,7 @@
 use rayon::prelude::*;
 
 use crate::base::sums::{PARALLEL_MIN, PIECE};
+use crate::solve::stop::Fault;
 
 /// Elements of a vector per piece. The largest thing a piece touches, 1024 × 16 lanes, fits L2.
 pub const PIECE_ROWS: usize = 1024;
@@ -173,6 +174,16 @@ pub fn lane_of(block: &[f64], k: usize, l: usize, out: &mut [f64; PIECE_ROWS]) -
         *out = row[l];
     }
     rows
+}
+
+/// Where lane `l` of an m×k block u, or else of the n×k block Ãᵀu, first holds what is not finite.
+pub fn locate(u: &[f64], s: &[f64], k: usize, l: usize) -> Fault {
+    let first = |block: &[f64]| block.chunks(k).position(|row| !row[l].is_finite());
+    match (first(u), first(s)) {
+        (Some(row), _) => Fault::Row(row),
+        (None, Some(column)) => Fault::Column(column),
+        (None, None) => Fault::Norm,
+    }
 }
 
 /// Keeps the lanes at `kept` (ascending) of a rows×k block, in place; the block shrinks.

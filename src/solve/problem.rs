@@ -93,6 +93,22 @@ impl Problem<'_> {
         if self.start.is_some() { at(&self.start, j, set) } else { self.reference_at(j, set) }
     }
 
+    /// Whether ‖y‖ is the penalty norm ‖P(x − x_ref)‖: D = 1/p on the free unknowns and x₀ = x_ref.
+    pub fn penalty_is_step(&self) -> bool {
+        // 1/p times p is 1 to one rounding.
+        let is_one = |product: f64| (product - 1.0).abs() <= 2.0 * f64::EPSILON;
+        let even = |j: usize| {
+            let d = self.matrix.scale(j);
+            d == 0.0 || is_one(d * self.penalty_factor(j))
+        };
+        !self.stacked && self.start.is_none() && (0..self.unknowns()).all(even)
+    }
+
+    /// Whether D = 1 on the free unknowns, so that gradients in y and in x are the same.
+    pub fn steps_are_model(&self) -> bool {
+        (0..self.unknowns()).all(|j| matches!(self.matrix.scale(j), 0.0 | 1.0))
+    }
+
     /// u before the first pass: W b over λ P x_ref, rows×k.
     pub fn right_hand_sides(&self) -> Vec<f64> {
         let (m, n, k) = (self.matrix.rows(), self.unknowns(), self.lanes.len());
@@ -160,4 +176,18 @@ pub struct Solved {
     pub orthogonality: f64,
     /// ‖Wb‖.
     pub data_norm: f64,
+}
+
+impl Solved {
+    /// Whether every norm of the certificate is finite: nothing else can be called converged.
+    pub fn is_finite(&self) -> bool {
+        let norms = [
+            self.residual_norm,
+            self.penalty_norm,
+            self.model_norm,
+            self.gradient_norm,
+            self.relative_gradient,
+        ];
+        norms.iter().all(|norm| norm.is_finite())
+    }
 }

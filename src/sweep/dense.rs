@@ -3,7 +3,7 @@
 use crate::operator::{RowWeights, Weighted};
 use crate::solve::certificate::{self, Candidate, Frobenius};
 use crate::solve::direct::Dense;
-use crate::solve::{Lane, Problem, Solved, Stop};
+use crate::solve::{Fault, Lane, Problem, Solved, Stop};
 use crate::sweep::run::{Request, SetSweep};
 use crate::sweep::{Strengths, range};
 
@@ -101,7 +101,11 @@ fn certified(
             .collect();
         *passes += 1;
         let certified = certificate::certify(problem, frobenius, candidates);
-        solved.extend(certified.into_iter().map(|c| Solved { stop: Stop::Direct, ..c.solved }));
+        solved.extend(certified.into_iter().map(|c| {
+            let finite = c.solved.is_finite();
+            let stop = if finite { Stop::Direct } else { Stop::NotFinite(Fault::Norm) };
+            Solved { stop, ..c.solved }
+        }));
     }
     solved
 }

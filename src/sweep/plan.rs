@@ -27,6 +27,8 @@ pub struct Facts<'a> {
     pub column_squares: &'a [f64],
     /// p, or `None` for 1.
     pub penalty: Option<&'a [f64]>,
+    /// Data of positive weight, of the first data set.
+    pub data: usize,
     /// Unknowns held at the reference.
     pub held: Option<&'a [bool]>,
     /// A start x₀ other than x_ref is given.
@@ -60,7 +62,8 @@ impl Plan {
         let scaled = match facts.scaling {
             Scaling::On => true,
             Scaling::Off => false,
-            Scaling::Auto => span(&norms) > SPAN_MAX && !keeps_fan,
+            // Where a solution is not unique, scaling would change which one is nearest.
+            Scaling::Auto => span(&norms) > SPAN_MAX && !keeps_fan && facts.may_be_unique(smallest),
         };
         if scaled {
             let scales = (0..norms.len()).map(|j| facts.scale(j, || 1.0 / norms[j], norms[j]));
@@ -73,7 +76,7 @@ impl Plan {
             };
         }
         let stacked = !shifts;
-        let made_identity = facts.penalty.filter(|_| !stacked && smallest > 0.0);
+        let made_identity = facts.penalty.filter(|_| !stacked && facts.invertible());
         let scales = match (made_identity, facts.held) {
             (None, None) => None,
             (penalty, _) => Some(
@@ -89,10 +92,20 @@ impl Plan {
 impl Facts<'_> {
     /// Whether L is I in some variables, so that λ is a shift.
     fn can_shift(&self, smallest: f64) -> bool {
-        let invertible = self.penalty.is_none_or(|p| {
+        smallest == 0.0 || (self.invertible() && !self.starts_elsewhere)
+    }
+
+    /// Whether p > 0 for every free unknown.
+    fn invertible(&self) -> bool {
+        self.penalty.is_none_or(|p| {
             p.iter().enumerate().all(|(j, p)| *p > 0.0 || self.held.is_some_and(|h| h[j]))
-        });
-        smallest == 0.0 || (invertible && !self.starts_elsewhere)
+        })
+    }
+
+    /// Whether shape alone lets the solution be unique: a strength above 0, or data enough.
+    fn may_be_unique(&self, smallest: f64) -> bool {
+        let held = self.held.map_or(0, |held| held.iter().filter(|h| **h).count());
+        smallest > 0.0 || self.data >= self.column_squares.len() - held
     }
 
     /// Norms of the columns of [WA; λP]; 0 for a held unknown.
@@ -143,6 +156,7 @@ mod tests {
             matrix,
             column_squares: squares,
             penalty: None,
+            data: 9,
             held: None,
             starts_elsewhere: false,
             method: Method::Lsqr,
@@ -165,6 +179,17 @@ mod tests {
         assert!(plan.scaled && plan.stacked);
         let plan = Plan::new(&facts(&matrix, &far), 0.1, true);
         assert!(plan.fan && !plan.scaled && plan.scales.is_none());
+    }
+
+    #[test]
+    fn with_fewer_data_than_unknowns_the_nearest_solution_stays_the_nearest() {
+        let matrix = StoredRows::from_dense(1, 2, &[1.0, 1000.0]);
+        let squares = [1.0, 1e6];
+        let weights = [2.0, 4.0];
+        let few = Facts { data: 1, penalty: Some(&weights), ..facts(&matrix, &squares) };
+        let plan = Plan::new(&few, 0.0, false);
+        // ‖P(x − x₀)‖ is what is least, as in the limit of small strengths.
+        assert_eq!((plan.scaled, plan.scales), (false, Some(vec![0.5, 0.25])));
     }
 
     #[test]

@@ -79,6 +79,7 @@ pub fn run(request: &Request<'_>, watch: &dyn Watch) -> Sweep {
         matrix: request.matrix,
         column_squares: &column_squares,
         penalty: request.penalty,
+        data: (0..request.matrix.rows()).filter(|&i| request.weights.at(i, 0) > 0.0).count(),
         held: request.held,
         starts_elsewhere: request.start.is_some(),
         method: request.method,
@@ -154,22 +155,37 @@ impl Running<'_, '_> {
             Strengths::Given(_) => None,
         };
         let choose = |processes: &[&Process]| range::found(processes, count);
-        let scout = Scout { steps: range::SCOUT_STEPS, choose: &choose };
+        let allowed = usize::try_from(self.request.rules.max_iterations).unwrap_or(usize::MAX);
+        let scout = Scout { steps: range::SCOUT_STEPS.min(allowed), choose: &choose };
         self.group(lanes, strengths.is_none().then_some(scout));
         let solved = &self.groups.last().expect("a group just ran").outcome.solved;
         solved.iter().filter(|s| s.set == sets[0]).map(|s| s.strength).collect()
     }
 
-    /// The range from a short process of its own, for methods without a fan.
+    /// The range from a short process of its own, for methods without a fan: in the variables in
+    /// which the penalty is I, as a fan would, and from as many data sets as one would have as lanes.
     fn scouted(&mut self, count: Option<usize>) -> Vec<f64> {
-        // Unscaled: the range is one of strengths, whatever variables the lanes will use.
-        let bare = Weighted::new(self.request.matrix, self.request.weights, None);
-        let lanes = vec![Lane { set: 0, strengths: vec![0.0] }];
-        let problem = Problem { matrix: &bare, start: None, ..self.problem(lanes, false) };
-        let rules =
-            StopRules { max_iterations: range::SCOUT_STEPS as u64, ..self.request.rules.clone() };
+        let scale = |j: usize| match self.request.penalty.map_or(1.0, |p| p[j]) {
+            _ if self.request.held.is_some_and(|held| held[j]) => 0.0,
+            p if p > 0.0 => 1.0 / p,
+            _ => 1.0,
+        };
+        let scales: Vec<f64> = (0..self.request.matrix.columns()).map(scale).collect();
+        let even = Weighted::new(self.request.matrix, self.request.weights, Some(&scales));
+        let sets = self.request.data.ncols().min(LANES_MAX);
+        let lanes = (0..sets).map(|set| Lane { set, strengths: vec![0.0] }).collect();
+        let problem = Problem { matrix: &even, start: None, ..self.problem(lanes, false) };
+        let rules = StopRules {
+            max_iterations: range::SCOUT_STEPS as u64,
+            // Nothing but the end of the process stops it early.
+            gradient_tolerance: f64::MIN_POSITIVE,
+            residual_tolerance: 0.0,
+            noise_factor: None,
+            ..self.request.rules.clone()
+        };
         let outcome = solve::run(&problem, Method::Lsqr, &rules, None, self.watch);
-        let strengths = range::found(&[&outcome.processes[0]], count);
+        let processes: Vec<&Process> = outcome.processes.iter().collect();
+        let strengths = range::found(&processes, count);
         self.groups.push(Group { lanes: Vec::new(), outcome });
         strengths
     }
@@ -211,7 +227,6 @@ fn gather(request: &Request<'_>, plan: Plan, strengths: Vec<f64>, groups: Vec<Gr
     };
     for Group { lanes, outcome } in groups {
         sweep.passes += outcome.passes;
-        sweep.iterations += outcome.iterations;
         sweep.workspace_bytes = sweep.workspace_bytes.max(outcome.workspace_bytes);
         sweep.interrupted = sweep.interrupted.or(outcome.interrupted);
         sweep.lanes_max = sweep.lanes_max.max(lanes.len());
@@ -219,6 +234,7 @@ fn gather(request: &Request<'_>, plan: Plan, strengths: Vec<f64>, groups: Vec<Gr
         if lanes.is_empty() {
             continue;
         }
+        sweep.iterations += outcome.iterations;
         sweep.history.extend(outcome.history);
         for solved in outcome.solved {
             sets[solved.set].solved.push(solved);
