@@ -259,16 +259,7 @@ fn hilbert_corner_is_found_between_the_strengths_and_gcv_sits_on_the_edge() {
     };
     let sweep = case.sweep(&strengths);
     let set = &sweep.sets[0];
-    let points: Vec<Point> = set
-        .solved
-        .iter()
-        .map(|solved| Point {
-            strength: solved.strength,
-            residual_norm: solved.residual_norm,
-            penalty_norm: solved.penalty_norm,
-            converged: solved.stop.converged(),
-        })
-        .collect();
+    let points: Vec<Point> = set.solved.iter().map(Point::from).collect();
     let choice = choose(
         &Curve { points: &points, process: set.process.as_ref(), data_of_known_noise: None },
         None,

@@ -10,7 +10,7 @@ pub mod verdict;
 
 pub use verdict::{Choice, Rule, RuleResult, Verdict, choose};
 
-use crate::solve::Process;
+use crate::solve::{Process, Solved};
 
 /// One point of the trade-off curve.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -23,6 +23,17 @@ pub struct Point {
     pub penalty_norm: f64,
     /// [`crate::solve::Stop::converged`] of the track.
     pub converged: bool,
+}
+
+impl From<&Solved> for Point {
+    fn from(solved: &Solved) -> Self {
+        Self {
+            strength: solved.strength,
+            residual_norm: solved.residual_norm,
+            penalty_norm: solved.penalty_norm,
+            converged: solved.stop.converged(),
+        }
+    }
 }
 
 /// What a rule may look at.

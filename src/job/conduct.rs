@@ -379,16 +379,7 @@ fn breakdown(system: &System, sets: &[SetSweep]) -> Option<Complaint> {
 }
 
 fn choice(set: &SetSweep, rule: Option<RuleName>, known_noise: Option<usize>) -> Choice {
-    let points: Vec<Point> = set
-        .solved
-        .iter()
-        .map(|solved| Point {
-            strength: solved.strength,
-            residual_norm: solved.residual_norm,
-            penalty_norm: solved.penalty_norm,
-            converged: solved.stop.converged(),
-        })
-        .collect();
+    let points: Vec<Point> = set.solved.iter().map(Point::from).collect();
     let wanted = rule.map(|rule| match rule {
         RuleName::Corner => Rule::Corner,
         RuleName::CornerPruned => Rule::CornerPruned,

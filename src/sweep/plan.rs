@@ -1,6 +1,5 @@
 //! How a set of strengths is solved: variables, scaling, fan or stacked lanes.
 
-use crate::operator::{StoredRows, Weighted};
 use crate::solve::Method;
 
 /// Column norms that span more than this factor are evened out by scaling.
@@ -21,8 +20,6 @@ pub enum Scaling {
 
 /// What the plan is made from.
 pub struct Facts<'a> {
-    /// A, m×n.
-    pub matrix: &'a StoredRows,
     /// Σᵢ(wᵢaᵢⱼ)² of every column, of the first data set.
     pub column_squares: &'a [f64],
     /// p, or `None` for 1.
@@ -138,22 +135,12 @@ pub fn span(norms: &[f64]) -> f64 {
     if high > 0.0 { high / low } else { 1.0 }
 }
 
-/// A borrowed operator for a plan.
-pub fn weighted<'a>(
-    plan: &'a Plan,
-    matrix: &'a StoredRows,
-    weights: &'a crate::operator::RowWeights,
-) -> Weighted<'a> {
-    Weighted::new(matrix, weights, plan.scales.as_deref())
-}
-
 #[cfg(test)]
 mod tests {
     use super::*;
 
-    fn facts<'a>(matrix: &'a StoredRows, squares: &'a [f64]) -> Facts<'a> {
+    fn facts(squares: &[f64]) -> Facts<'_> {
         Facts {
-            matrix,
             column_squares: squares,
             penalty: None,
             data: 9,
@@ -166,27 +153,25 @@ mod tests {
 
     #[test]
     fn scaling_comes_on_beyond_a_factor_of_a_hundred_but_never_costs_a_sweep_its_fan() {
-        let matrix = StoredRows::from_dense(1, 2, &[1.0, 1.0]);
         let near = [1.0, 9_900.0];
         let far = [1.0, 10_100.0];
-        assert!(!Plan::new(&facts(&matrix, &near), 0.0, false).scaled);
-        let plan = Plan::new(&facts(&matrix, &far), 0.0, false);
+        assert!(!Plan::new(&facts(&near), 0.0, false).scaled);
+        let plan = Plan::new(&facts(&far), 0.0, false);
         assert!(plan.scaled && !plan.stacked);
         assert_eq!(plan.scales.unwrap()[0], 1.0);
         // With λ = 10 the columns of [WA; λI] span about 10 only.
-        assert!(!Plan::new(&facts(&matrix, &far), 10.0, false).scaled);
-        let plan = Plan::new(&facts(&matrix, &far), 0.1, false);
+        assert!(!Plan::new(&facts(&far), 10.0, false).scaled);
+        let plan = Plan::new(&facts(&far), 0.1, false);
         assert!(plan.scaled && plan.stacked);
-        let plan = Plan::new(&facts(&matrix, &far), 0.1, true);
+        let plan = Plan::new(&facts(&far), 0.1, true);
         assert!(plan.fan && !plan.scaled && plan.scales.is_none());
     }
 
     #[test]
     fn with_fewer_data_than_unknowns_the_nearest_solution_stays_the_nearest() {
-        let matrix = StoredRows::from_dense(1, 2, &[1.0, 1000.0]);
         let squares = [1.0, 1e6];
         let weights = [2.0, 4.0];
-        let few = Facts { data: 1, penalty: Some(&weights), ..facts(&matrix, &squares) };
+        let few = Facts { data: 1, penalty: Some(&weights), ..facts(&squares) };
         let plan = Plan::new(&few, 0.0, false);
         // ‖P(x − x₀)‖ is what is least, as in the limit of small strengths.
         assert_eq!((plan.scaled, plan.scales), (false, Some(vec![0.5, 0.25])));
@@ -194,18 +179,17 @@ mod tests {
 
     #[test]
     fn what_rules_out_the_fan_stacks() {
-        let matrix = StoredRows::from_dense(1, 2, &[1.0, 1.0]);
         let squares = [1.0, 1.0];
         let zero = [0.0, 2.0];
-        let plain = facts(&matrix, &squares);
+        let plain = facts(&squares);
         assert!(Plan::new(&Facts { starts_elsewhere: true, ..plain }, 1.0, false).stacked);
-        let plain = facts(&matrix, &squares);
+        let plain = facts(&squares);
         assert!(Plan::new(&Facts { penalty: Some(&zero), ..plain }, 1.0, true).stacked);
-        let plain = facts(&matrix, &squares);
+        let plain = facts(&squares);
         let held = Facts { penalty: Some(&zero), held: Some(&[true, false]), ..plain };
         let plan = Plan::new(&held, 1.0, true);
         assert_eq!((plan.stacked, plan.scales.unwrap()), (false, vec![0.0, 0.5]));
-        let cgls = Facts { method: Method::Cgls, ..facts(&matrix, &squares) };
+        let cgls = Facts { method: Method::Cgls, ..facts(&squares) };
         let plan = Plan::new(&cgls, 1.0, true);
         assert!(!plan.stacked && !plan.fan);
     }

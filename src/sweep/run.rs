@@ -7,7 +7,7 @@ use crate::solve::{
     self, HistoryRow, Interrupt, Lane, Method, Outcome, Problem, Process, Scout, Solved, StopRules,
     Watch,
 };
-use crate::sweep::plan::{self, Facts, Plan, Scaling};
+use crate::sweep::plan::{Facts, Plan, Scaling};
 use crate::sweep::{LANES_MAX, Strengths, range};
 
 /// A family of strengths on one system.
@@ -76,7 +76,6 @@ pub fn run(request: &Request<'_>, watch: &dyn Watch) -> Sweep {
     let bare = Weighted::new(request.matrix, request.weights, None);
     let column_squares = bare.column_squares(0);
     let facts = Facts {
-        matrix: request.matrix,
         column_squares: &column_squares,
         penalty: request.penalty,
         data: (0..request.matrix.rows()).filter(|&i| request.weights.at(i, 0) > 0.0).count(),
@@ -97,7 +96,7 @@ pub fn run(request: &Request<'_>, watch: &dyn Watch) -> Sweep {
         }
     };
     let plan = Plan::new(&facts, smallest, many);
-    let matrix = plan::weighted(&plan, request.matrix, request.weights);
+    let matrix = Weighted::new(request.matrix, request.weights, plan.scales.as_deref());
     let mut run = Running { request, plan: &plan, matrix: &matrix, watch, groups: Vec::new() };
     let strengths = run.all();
     let groups = std::mem::take(&mut run.groups);
