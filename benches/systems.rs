@@ -25,7 +25,7 @@ use std::time::Instant;
 
 use ellbow::base::random::Stream;
 use ellbow::base::sums;
-use ellbow::operator::StoredRows;
+use ellbow::operator::CompressedRows;
 use ndarray::ArrayView1;
 use ndarray_npy::WriteNpyExt;
 use rayon::prelude::*;
@@ -42,7 +42,7 @@ const USAGE: &str = "usage: cargo bench --bench systems -- SCENARIO DIR [--scale
 
 /// What a scenario makes.
 pub struct Made {
-    pub matrix: StoredRows,
+    pub matrix: CompressedRows,
     pub truth: Vec<f64>,
     /// Sum that each row must have, where it is known from elsewhere.
     pub row_sums: Option<Vec<f64>>,

@@ -1,7 +1,9 @@
 //! Operators against a dense reference written here: the pass and the symmetry ⟨Av,u⟩ = ⟨v,Aᵀu⟩.
 
 use ellbow::base::random::Stream;
-use ellbow::operator::{Frame, Operator, Pass, RowWeights, Stacked, StoredRows, Weighted};
+use ellbow::operator::{
+    CompressedRows, Frame, Operator, Pass, RowWeights, Stacked, StoredRows, Weighted,
+};
 use ndarray::Array2;
 use proptest::prelude::*;
 use sprs::CsMatI;
@@ -65,11 +67,17 @@ fn build(shape: Shape, storage: Storage, stream: &Stream) -> (StoredRows, Vec<Ve
         Storage::Double => StoredRows::from_compressed(m, n, pointers, columns, values),
         Storage::Single => {
             let values = values.iter().map(|&value| value as f32).collect();
-            StoredRows::Single(CsMatI::try_new((m, n), pointers, columns, values).unwrap())
+            StoredRows::build(
+                CompressedRows::Single(CsMatI::try_new((m, n), pointers, columns, values).unwrap()),
+                None,
+            )
         }
         Storage::Pattern => {
             let ones = vec![(); columns.len()];
-            StoredRows::Pattern(CsMatI::try_new((m, n), pointers, columns, ones).unwrap())
+            StoredRows::build(
+                CompressedRows::Pattern(CsMatI::try_new((m, n), pointers, columns, ones).unwrap()),
+                None,
+            )
         }
     };
     (stored, dense)

@@ -13,7 +13,7 @@ use std::sync::Once;
 
 use ellbow::base::random::Stream;
 use ellbow::base::{Axis, Grid};
-use ellbow::operator::StoredRows;
+use ellbow::operator::CompressedRows;
 use ellbow::system::rays::{self, RayMatrix, Segment};
 use flate2::{Compression, read::MultiGzDecoder, write::GzEncoder};
 use ndarray::Array1;
@@ -115,7 +115,7 @@ fn rows_csv() -> String {
     text
 }
 
-fn matrix_market(matrix: &StoredRows) -> String {
+fn matrix_market(matrix: &CompressedRows) -> String {
     let mut text = "%%MatrixMarket matrix coordinate real general\n".to_string();
     text += "% Length in metres of each straight ray in each cell. Invented demo data.\n";
     writeln!(text, "{} {} {}", matrix.rows(), matrix.columns(), matrix.entries()).unwrap();

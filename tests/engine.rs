@@ -294,7 +294,7 @@ fn an_overflow_is_placed_within_one_iteration() {
     let mut case = case(30, 20, 2, 20);
     case.weights = RowWeights::Ones;
     case.reference = None;
-    let row = (0..30).find(|&i| i > 7 && case.matrix.row(i).columns.len() > 1).unwrap();
+    let row = (0..30).find(|&i| i > 7 && case.matrix.row(i).entries().count() > 1).unwrap();
     case.data[[row, 1]] = f64::INFINITY;
     for method in METHODS {
         let lanes = (0..2).map(|set| Lane { set, strengths: vec![1.0] }).collect();

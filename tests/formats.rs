@@ -6,7 +6,7 @@ use std::path::{Path, PathBuf};
 use ellbow::files::matrix::{self, ReadOptions};
 use ellbow::files::vector::{self, NonFinite};
 use ellbow::files::{FileError, Loaded};
-use ellbow::operator::{Duplicates, Precision, StoredRows};
+use ellbow::operator::{CompressedRows, Duplicates, Precision};
 
 /// A folder of its own for one test's files.
 struct Desk(tempfile::TempDir);
@@ -23,11 +23,11 @@ impl Desk {
     }
 
     /// The matrix in a text, with options.
-    fn load(&self, text: impl AsRef<[u8]>, options: &ReadOptions) -> Loaded<StoredRows> {
+    fn load(&self, text: impl AsRef<[u8]>, options: &ReadOptions) -> Loaded<CompressedRows> {
         matrix::read(&self.file("a.mtx", text), options).unwrap()
     }
 
-    fn accept(&self, text: impl AsRef<[u8]>) -> Loaded<StoredRows> {
+    fn accept(&self, text: impl AsRef<[u8]>) -> Loaded<CompressedRows> {
         self.load(text, &ReadOptions::default())
     }
 
@@ -57,7 +57,7 @@ fn says(message: &str, pieces: &[&str]) {
     }
 }
 
-fn dense(a: &StoredRows) -> Vec<Vec<f64>> {
+fn dense(a: &CompressedRows) -> Vec<Vec<f64>> {
     (0..a.rows())
         .map(|i| {
             let mut row = vec![0.0; a.columns()];

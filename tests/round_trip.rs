@@ -7,7 +7,7 @@ use std::path::Path;
 use ellbow::files::matrix::{self, ReadOptions};
 use ellbow::files::vector::{self, NonFinite};
 use ellbow::files::{Folder, Loaded};
-use ellbow::operator::StoredRows;
+use ellbow::operator::CompressedRows;
 use proptest::prelude::*;
 
 /// A dense matrix by rows, most entries zero.
@@ -62,14 +62,14 @@ fn mirrored(a: &Dense, sign: f64) -> Dense {
     Dense { rows: n, columns: n, values }
 }
 
-fn load(folder: &Path, name: &str, content: &[u8]) -> Loaded<StoredRows> {
+fn load(folder: &Path, name: &str, content: &[u8]) -> Loaded<CompressedRows> {
     let path = folder.join(name);
     std::fs::write(&path, content).unwrap();
     matrix::read(&path, &ReadOptions::default()).unwrap()
 }
 
 /// Compares bits of every entry, and that nothing else is stored.
-fn check(loaded: &StoredRows, wanted: &Dense) -> Result<(), TestCaseError> {
+fn check(loaded: &CompressedRows, wanted: &Dense) -> Result<(), TestCaseError> {
     prop_assert_eq!((loaded.rows(), loaded.columns()), (wanted.rows, wanted.columns));
     for i in 0..wanted.rows {
         let found: Vec<(usize, u64)> =

@@ -5,9 +5,7 @@ use std::fs::File;
 use std::io::{BufWriter, Write};
 use std::path::Path;
 
-use ellbow::each_storage;
-use ellbow::kernel::Value;
-use ellbow::operator::StoredRows;
+use ellbow::operator::CompressedRows;
 use zip::write::SimpleFileOptions;
 use zip::{CompressionMethod, ZipWriter};
 
@@ -17,7 +15,7 @@ const BYTES_PER_WRITE: usize = 1 << 20;
 
 /// # Errors
 /// More than 2³¹ − 1 entries or columns, and whatever the disk says.
-pub fn write(path: &Path, matrix: &StoredRows) -> Result<(), Box<dyn Error>> {
+pub fn write(path: &Path, matrix: &CompressedRows) -> Result<(), Box<dyn Error>> {
     // SciPy's indices are signed.
     i32::try_from(matrix.entries().max(matrix.columns()))?;
     let mut archive = Archive(ZipWriter::new(BufWriter::new(File::create(path)?)));
@@ -27,12 +25,10 @@ pub fn write(path: &Path, matrix: &StoredRows) -> Result<(), Box<dyn Error>> {
     let pointers = matrix.pointers().iter().map(|&pointer| (pointer as i32).to_le_bytes());
     archive.member("indptr", "<i4", &format!("({},)", pointers.len()), pointers)?;
     let length = format!("({},)", matrix.entries());
-    each_storage!(matrix, a => {
-        let columns = a.indices().iter().map(|&column| (column as i32).to_le_bytes());
-        archive.member("indices", "<i4", &length, columns)?;
-        let values = a.data().iter().map(|value| value.number().to_le_bytes());
-        archive.member("data", "<f8", &length, values)?;
-    });
+    let columns = matrix.indices().iter().map(|&column| (column as i32).to_le_bytes());
+    archive.member("indices", "<i4", &length, columns)?;
+    let values = (0..matrix.rows()).flat_map(|i| matrix.row(i).entries()).map(|entry| entry.1);
+    archive.member("data", "<f8", &length, values.map(f64::to_le_bytes))?;
     archive.0.finish()?.flush()?;
     Ok(())
 }

@@ -2,7 +2,7 @@
 
 use ellbow::base::random::Stream;
 use ellbow::base::{Axis, Grid};
-use ellbow::operator::StoredRows;
+use ellbow::operator::CompressedRows;
 use ellbow::system::rays::{self, Segment};
 use rayon::prelude::*;
 
@@ -16,7 +16,7 @@ pub const SEED: u64 = 1;
 /// Parallel views over half a turn of a square of unit cells; truth: the head phantom.
 /// Entries grow with cells a side × views × rays, so each is scaled by ∛F.
 pub fn parallel(scale: f64) -> Made {
-    let side = shrink(512, scale.cbrt());
+    let [side, _] = parallel_sides(scale);
     let views = shrink(360, scale.cbrt());
     let rays = shrink(728, scale.cbrt());
     let grid = grid(&[side, side]);
@@ -45,7 +45,7 @@ pub fn parallel(scale: f64) -> Made {
 /// a slow ball. Entries grow with the number of rays × cells a side; rays go with the cells, F^{3/4}.
 pub fn crosswell(scale: f64) -> Made {
     let by = scale.sqrt().sqrt();
-    let sides = [shrink(100, by), shrink(100, by), shrink(60, by)];
+    let sides = crosswell_sides(scale);
     let grid = grid(&sides);
     let [x, y, z] = sides.map(|cells| cells as f64);
     let random = Stream::new(SEED, 0);
@@ -81,7 +81,7 @@ pub fn hostile(scale: f64) -> Made {
     }
     let truth = Stream::new(SEED, u64::MAX - 1);
     Made {
-        matrix: StoredRows::from_compressed(m, n, pointers, indices, values),
+        matrix: CompressedRows::from_compressed(m, n, pointers, indices, values),
         truth: (0..n as u64).map(|j| truth.normal(j)).collect(),
         row_sums: None,
     }
@@ -112,11 +112,23 @@ fn straight(grid: &Grid, segments: &[Segment], truth: Vec<f64>) -> Made {
     Made { matrix: built.matrix, truth, row_sums: Some(built.chords) }
 }
 
+/// Cells along the axes of [`parallel`].
+pub fn parallel_sides(scale: f64) -> [usize; 2] {
+    [shrink(512, scale.cbrt()); 2]
+}
+
+/// Cells along the axes of [`crosswell`].
+pub fn crosswell_sides(scale: f64) -> [usize; 3] {
+    let by = scale.sqrt().sqrt();
+    [shrink(100, by), shrink(100, by), shrink(60, by)]
+}
+
 fn shrink(full: usize, by: f64) -> usize {
     ((full as f64 * by).round() as usize).max(2)
 }
 
-fn grid(cells: &[usize]) -> Grid {
+/// A grid of unit cells, first axis fastest.
+pub fn grid(cells: &[usize]) -> Grid {
     let axes = cells
         .iter()
         .zip(["x", "y", "z"])

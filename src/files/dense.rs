@@ -9,7 +9,7 @@ use super::{Facts, FileError, Loaded};
 use crate::base::Complaint;
 use crate::operator::build::{Feeder, RowCounts, RunCounter};
 use crate::operator::keep::Keep;
-use crate::operator::{Precision, StoredRows};
+use crate::operator::{CompressedRows, Precision};
 
 /// Elements decoded at once.
 pub const BLOCK: usize = 1 << 14;
@@ -59,7 +59,7 @@ impl<'a> Array<'a> {
 pub fn read_matrix(
     source: &Source,
     options: &ReadOptions,
-) -> Result<Loaded<StoredRows>, FileError> {
+) -> Result<Loaded<CompressedRows>, FileError> {
     let bad = |complaint| source.bad(complaint);
     let array = Array::new(source.bytes()).map_err(bad)?;
     let &[rows, columns] = array.header.shape.as_slice() else {
@@ -159,7 +159,7 @@ impl Dense<'_> {
         &self,
         counts: RowCounts,
         options: &ReadOptions,
-    ) -> Result<StoredRows, Complaint> {
+    ) -> Result<CompressedRows, Complaint> {
         let mut feeder = Feeder::<V>::new(counts, self.columns);
         self.array.each(|place, value| {
             let (row, column) = self.place(place);

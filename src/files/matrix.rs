@@ -6,7 +6,7 @@ use super::source::{Kind, Source, kind_of};
 use super::{FileError, Loaded, dense, matrix_market, npz};
 use crate::base::{Complaint, Warning};
 use crate::operator::settle::{Refused, Rules};
-use crate::operator::{Duplicates, Precision, StoredRows};
+use crate::operator::{CompressedRows, Duplicates, Precision};
 
 /// How a matrix is read.
 #[derive(Debug, Clone, Copy, Default)]
@@ -30,7 +30,7 @@ const ACCEPTED: &str = "a Matrix Market file (it begins with %%MatrixMarket; als
 ///
 /// # Errors
 /// The file cannot be read; it breaks its format; a value or an index is not acceptable.
-pub fn read(path: &Path, options: &ReadOptions) -> Result<Loaded<StoredRows>, FileError> {
+pub fn read(path: &Path, options: &ReadOptions) -> Result<Loaded<CompressedRows>, FileError> {
     let source = Source::open(path)?;
     match kind_of(source.bytes()) {
         Kind::Npy => dense::read_matrix(&source, options),

@@ -16,7 +16,7 @@ use crate::base::Complaint;
 use crate::operator::build::{Feeder, RowCounts, RunCounter};
 use crate::operator::keep::Keep;
 use crate::operator::settle::Settled;
-use crate::operator::{Precision, StoredRows};
+use crate::operator::{CompressedRows, Precision};
 
 mod member;
 
@@ -34,7 +34,7 @@ const BLOCK: u64 = 1 << 14;
 pub fn read_matrix(
     source: &Source,
     options: &ReadOptions,
-) -> Result<Loaded<StoredRows>, FileError> {
+) -> Result<Loaded<CompressedRows>, FileError> {
     let bad = |complaint| source.bad(complaint);
     let mut archive = ZipArchive::new(Cursor::new(source.bytes())).map_err(|e| bad(damaged(&e)))?;
     check_names(source.bytes(), &archive).map_err(bad)?;

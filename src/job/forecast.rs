@@ -2,10 +2,8 @@
 
 use std::time::Instant;
 
-use sprs::CsMatI;
-
 use crate::base::memory;
-use crate::operator::{Operator, RowWeights, StoredRows, Weighted};
+use crate::operator::{Operator, Weighted};
 use crate::solve::certificate::{self, Frobenius};
 use crate::solve::fan::{Fan, Rotations};
 use crate::solve::lsqr::Lsqr;
@@ -20,12 +18,6 @@ const PROBE_SECONDS: f64 = 0.4;
 
 /// Steps that a probe makes at least, and at most.
 const STEPS: (usize, usize) = (3, 400);
-
-/// A larger matrix is probed on a sample of its rows with about this many entries.
-const SAMPLE_ENTRIES: usize = 20_000_000;
-
-/// Rows that stay together in a sample, so that neighbours still share the cache.
-const SAMPLE_ROWS: usize = 256;
 
 /// Forecasts a solve and a default sweep with LSQR on the calling thread pool. To be called after
 /// the system is loaded and its facts are known, and before anything else takes memory: what is
@@ -91,21 +83,9 @@ fn run_bytes(matrix: &Weighted<'_>, system: &System, strengths: usize) -> u64 {
 
 /// Median seconds of a step of the process with all data sets as lanes.
 fn seconds_per_step(system: &System, sets: usize) -> f64 {
-    let entries = system.matrix.entries();
-    if entries <= 2 * SAMPLE_ENTRIES {
-        return probe(&system.matrix, &system.weights, system, sets);
-    }
-    let (sample, weights) = sample(system);
-    // Time goes with entries; the sample has the same columns, so what goes with n is counted
-    // more than it weighs in the whole, which errs on the slow side.
-    let share = entries as f64 / sample.entries() as f64;
-    probe(&sample, &weights, system, sets) * share
-}
-
-fn probe(matrix: &StoredRows, weights: &RowWeights, system: &System, sets: usize) -> f64 {
-    let operator = Weighted::new(matrix, weights, None);
+    let operator = Weighted::new(&system.matrix, &system.weights, None);
     // Data of ones would end the process early on some systems; the matrix decides the time.
-    let data = ndarray::Array2::from_shape_fn((matrix.rows(), system.sets()), |(i, set)| {
+    let data = ndarray::Array2::from_shape_fn((operator.rows(), system.sets()), |(i, set)| {
         let stream = crate::base::random::Stream::new(1, set as u64);
         stream.sign(i as u64)
     });
@@ -119,7 +99,7 @@ fn probe(matrix: &StoredRows, weights: &RowWeights, system: &System, sets: usize
         lanes: (0..sets).map(|set| Lane { set, strengths: vec![0.0] }).collect(),
     };
     // Only the level at which the process counts as ended depends on these norms.
-    let frobenius = Frobenius::new(vec![vec![0.0; matrix.columns()]], system.sets());
+    let frobenius = Frobenius::new(vec![vec![0.0; operator.columns()]], system.sets());
     let norms: Vec<f64> = (0..sets).map(|set| frobenius.in_model(&problem, set, 0.0)).collect();
     let mut fan = Fan::<Lsqr>::new(&problem, &norms, STEPS.1, None);
     fan.start();
@@ -134,37 +114,4 @@ fn probe(matrix: &StoredRows, weights: &RowWeights, system: &System, sets: usize
     }
     seconds.sort_by(f64::total_cmp);
     seconds[seconds.len() / 2]
-}
-
-/// Every few blocks of rows, about [`SAMPLE_ENTRIES`] entries in all, with their weights.
-fn sample(system: &System) -> (StoredRows, RowWeights) {
-    let matrix = &system.matrix;
-    let stride = matrix.entries().div_ceil(SAMPLE_ENTRIES);
-    let rows: Vec<usize> =
-        (0..matrix.rows()).filter(|i| (i / SAMPLE_ROWS).is_multiple_of(stride)).collect();
-    let stored = match matrix {
-        StoredRows::Double(a) => StoredRows::Double(pick(a, &rows)),
-        StoredRows::Single(a) => StoredRows::Single(pick(a, &rows)),
-        StoredRows::Pattern(a) => StoredRows::Pattern(pick(a, &rows)),
-    };
-    let weights = match &system.weights {
-        RowWeights::Ones => RowWeights::Ones,
-        RowWeights::Shared(w) => RowWeights::Shared(rows.iter().map(|&i| w[i]).collect()),
-        RowWeights::PerSet(w) => RowWeights::PerSet(w.select(ndarray::Axis(0), &rows)),
-    };
-    (stored, weights)
-}
-
-fn pick<V: Copy>(a: &CsMatI<V, u32, usize>, rows: &[usize]) -> CsMatI<V, u32, usize> {
-    let pointers = a.indptr();
-    let pointers = pointers.raw_storage();
-    let mut starts = vec![0];
-    let (mut indices, mut values) = (Vec::new(), Vec::new());
-    for &i in rows {
-        let entries = pointers[i]..pointers[i + 1];
-        indices.extend_from_slice(&a.indices()[entries.clone()]);
-        values.extend_from_slice(&a.data()[entries]);
-        starts.push(indices.len());
-    }
-    CsMatI::new((rows.len(), a.cols()), starts, indices, values)
 }

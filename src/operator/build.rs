@@ -290,7 +290,7 @@ fn cut_rows(starts: &[usize], total: usize) -> Vec<(usize, usize)> {
 
 #[cfg(test)]
 mod tests {
-    use super::super::rows::StoredRows;
+    use super::super::compressed::CompressedRows;
     use super::super::settle::{Duplicates, Rules};
     use super::*;
     use crate::base::random::Stream;
@@ -313,7 +313,7 @@ mod tests {
         (list, dense)
     }
 
-    fn build(list: &[(usize, u32, f64)]) -> StoredRows {
+    fn build(list: &[(usize, u32, f64)]) -> CompressedRows {
         let counts = RowCounts::new(50);
         {
             let mut counter = RunCounter::new(&counts);

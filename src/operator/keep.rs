@@ -2,7 +2,7 @@
 
 use sprs::CsMatI;
 
-use super::rows::StoredRows;
+use super::compressed::CompressedRows;
 use crate::kernel::Value;
 
 /// A value that the matrix can keep.
@@ -19,8 +19,8 @@ pub trait Keep: Value + Default + PartialEq + Send + Sync {
         (kept.number() == number || number.is_nan()).then_some(kept)
     }
 
-    /// The matrix in the variant of [`StoredRows`] for this storage; nothing is copied.
-    fn store(matrix: CsMatI<Self, u32, usize>) -> StoredRows;
+    /// The matrix in the variant of [`CompressedRows`] for this storage; nothing is copied.
+    fn store(matrix: CsMatI<Self, u32, usize>) -> CompressedRows;
 }
 
 impl Keep for f64 {
@@ -28,8 +28,8 @@ impl Keep for f64 {
     fn keep(number: f64) -> Self {
         number
     }
-    fn store(matrix: CsMatI<Self, u32, usize>) -> StoredRows {
-        StoredRows::Double(matrix)
+    fn store(matrix: CsMatI<Self, u32, usize>) -> CompressedRows {
+        CompressedRows::Double(matrix)
     }
 }
 
@@ -38,8 +38,8 @@ impl Keep for f32 {
     fn keep(number: f64) -> Self {
         number as f32
     }
-    fn store(matrix: CsMatI<Self, u32, usize>) -> StoredRows {
-        StoredRows::Single(matrix)
+    fn store(matrix: CsMatI<Self, u32, usize>) -> CompressedRows {
+        CompressedRows::Single(matrix)
     }
 }
 
@@ -49,7 +49,7 @@ impl Keep for () {
     fn keep_exactly(number: f64) -> Option<Self> {
         (number == 1.0).then_some(())
     }
-    fn store(matrix: CsMatI<Self, u32, usize>) -> StoredRows {
-        StoredRows::Pattern(matrix)
+    fn store(matrix: CsMatI<Self, u32, usize>) -> CompressedRows {
+        CompressedRows::Pattern(matrix)
     }
 }

@@ -2,20 +2,31 @@
 //!
 //! An operator works on blocks of lanes: v and s are n×k, u is m×k, row-major with lanes
 //! contiguous. A lane is one least-squares problem on the same matrix.
+//!
+//! Rows of u stand in file order. Rows of v and s stand in the inner order of the stored matrix,
+//! where neighbours in space are neighbours in memory: [`StoredRows::place_of`] says where an unknown
+//! is, and whoever fills or reads such a block asks it once per solve.
 
 pub(crate) mod build;
+pub mod compressed;
 pub(crate) mod keep;
+pub(crate) mod order;
 pub mod rows;
 pub(crate) mod settle;
 pub mod stack;
+pub(crate) mod tile;
+pub(crate) mod traffic;
 pub mod weighted;
 pub mod weights;
 
-pub use rows::{Precision, Row, StoredRows};
+pub use compressed::{CompressedRows, Precision};
+pub use rows::{Row, StoredRows};
 pub use settle::Duplicates;
 pub use stack::Stacked;
 pub use weighted::Weighted;
 pub use weights::RowWeights;
+
+use crate::kernel::{Block, Room};
 
 /// In which variables a pass reads v and writes s.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -37,13 +48,13 @@ pub struct Pass<'a> {
     pub sets: &'a [usize],
     /// Strength λ of each lane; read only by operators with penalty rows.
     pub strengths: &'a [f64],
-    /// n×k.
+    /// n×k, inner order.
     pub v: &'a [f64],
     /// k.
     pub alpha: &'a [f64],
-    /// m×k.
+    /// m×k, file order.
     pub u: &'a mut [f64],
-    /// n×k.
+    /// n×k, inner order.
     pub s: &'a mut [f64],
     /// k.
     pub squares: &'a mut [f64],
@@ -54,9 +65,8 @@ pub struct Pass<'a> {
 /// Memory an operator needs besides the blocks; made once, before the first pass.
 #[derive(Debug, Default)]
 pub struct Scratch {
-    pub(crate) scaled: Vec<f64>,
-    pub(crate) partial: Vec<f64>,
-    pub(crate) partial_squares: Vec<f64>,
+    pub(crate) scaled: Block,
+    pub(crate) room: Room,
 }
 
 /// What a solver multiplies with: one [`Pass`] is Ã and Ãᵀ in a single traversal.

@@ -1,137 +1,189 @@
-//! The stored matrix: compressed rows, with values held as f64, as f32, or not at all.
+//! The stored matrix: tiles of 16-bit columns, with values held as f64, as f32, or not at all.
 //!
 //! | values | bytes an entry | when |
 //! |---|---|---|
-//! | f64 | 12 | default |
-//! | f32 | 8 | the user asks, or every value is exactly an f32 |
-//! | none | 4 | a pattern matrix: every entry is 1 |
+//! | f64 | 10 and a little | default |
+//! | f32 | 6 and a little | the user asks, or every value is exactly an f32 |
+//! | none | 2 and a little | a pattern matrix: every entry is 1 |
 //!
-//! plus 8 bytes a row. Arithmetic is f64 whatever the storage. The matrix is never changed once
-//! built: weights, scales and masks are vectors applied in the pass.
+//! The little: 4 bytes per row and tile, 4 per row, 8 per column (see [`crate::kernel::tiles`]).
+//! Arithmetic is f64 whatever the storage. The matrix is never changed once built: weights, scales
+//! and masks are vectors applied in the pass.
+//!
+//! Rows and columns are numbered as in the file; the inner order of unknowns shows only in the
+//! blocks of a pass ([`StoredRows::place_of`]).
 
-use sprs::CsMatI;
+use crate::base::Grid;
+use crate::kernel::{Tiles, Value, Way};
+use crate::operator::compressed::CompressedRows;
+use crate::operator::order::ColumnOrder;
+use crate::operator::tile;
+use crate::operator::traffic::Ways;
 
-use crate::kernel::Value;
-
-/// How values are kept when the matrix is not a pattern.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, Default)]
-pub enum Precision {
-    /// f64, or f32 where every value is exactly an f32.
-    #[default]
-    Double,
-    /// f32: values are rounded; one that would overflow or vanish is refused.
-    Single,
+/// An m×n sparse matrix, immutable.
+#[derive(Debug, Clone, PartialEq)]
+pub struct StoredRows {
+    pub(crate) tiles: AnyTiles,
+    pub(crate) order: Orders,
+    pub(crate) ways: Ways,
 }
 
-/// An m×n sparse matrix in rows. Column indices ascend within a row and do not repeat.
+/// Tiles for each way of keeping values.
 #[derive(Debug, Clone, PartialEq)]
-pub enum StoredRows {
-    /// 12 bytes an entry.
-    Double(CsMatI<f64, u32, usize>),
-    /// 8 bytes an entry; each value stands for the f64 of the same number.
-    Single(CsMatI<f32, u32, usize>),
-    /// Every stored entry is 1; `()` takes no memory.
-    Pattern(CsMatI<(), u32, usize>),
+pub(crate) enum AnyTiles {
+    Double(Tiles<f64>),
+    Single(Tiles<f32>),
+    Pattern(Tiles<()>),
+}
+
+/// Both permutations; `None` where inner and file order are the same.
+#[derive(Debug, Clone, PartialEq, Default)]
+pub(crate) struct Orders {
+    pub columns: Option<ColumnOrder>,
+    /// File row of each inner row.
+    pub row_at: Option<Vec<u32>>,
+    /// Inner row of each file row.
+    pub inner_of: Option<Vec<u32>>,
 }
 
 /// The same expression for each way of keeping values.
 #[macro_export]
 #[doc(hidden)]
 macro_rules! each_storage {
-    ($stored:expr, $matrix:ident => $body:expr) => {
-        match $stored {
-            $crate::operator::StoredRows::Double($matrix) => $body,
-            $crate::operator::StoredRows::Single($matrix) => $body,
-            $crate::operator::StoredRows::Pattern($matrix) => $body,
+    ($stored:expr, $tiles:ident => $body:expr) => {
+        match &$stored.tiles {
+            $crate::operator::rows::AnyTiles::Double($tiles) => $body,
+            $crate::operator::rows::AnyTiles::Single($tiles) => $body,
+            $crate::operator::rows::AnyTiles::Pattern($tiles) => $body,
         }
     };
 }
 
-/// One row's entries, columns ascending.
+/// One row's entries.
 #[derive(Clone, Copy)]
 pub struct Row<'a> {
-    /// Column of each stored entry, ascending.
-    pub columns: &'a [u32],
-    values: RowValues<'a>,
-}
-
-#[derive(Clone, Copy)]
-enum RowValues<'a> {
-    Double(&'a [f64]),
-    Single(&'a [f32]),
-    Ones,
+    matrix: &'a StoredRows,
+    inner: usize,
 }
 
 impl<'a> Row<'a> {
-    /// The entry at `place` of `columns`, as f64. Panics if there is none.
-    pub fn value(&self, place: usize) -> f64 {
-        match self.values {
-            RowValues::Double(values) => values[place],
-            RowValues::Single(values) => f64::from(values[place]),
-            RowValues::Ones => 1.0,
-        }
-    }
-
-    /// (column, value) of each stored entry; explicit zeros included.
-    pub fn entries(self) -> impl ExactSizeIterator<Item = (usize, f64)> + 'a {
-        (0..self.columns.len()).map(move |place| (self.columns[place] as usize, self.value(place)))
+    /// (column, value) of each stored entry, explicit zeros included; in stored order, which is
+    /// the same for rows with entries in the same columns.
+    ///
+    /// Cost: a search among the rows of a slice in every tile, and the entries.
+    pub fn entries(self) -> impl Iterator<Item = (usize, f64)> + 'a {
+        let cut = self.matrix.cut();
+        let (slice, first) = (self.inner / cut.slice, self.inner / cut.slice / cut.band);
+        let row = (self.inner - first * cut.band * cut.slice) as u16;
+        (0..cut.tiles()).flat_map(move |tile| {
+            let (range, base) = self.matrix.find(slice, tile, row);
+            range.map(move |entry| self.matrix.entry(entry, base))
+        })
     }
 }
 
 impl StoredRows {
+    /// Takes compressed rows over, in the order that suits a pass best: along a space-filling
+    /// curve if the grid of the unknowns is given, else as counting the tiles advises.
+    ///
+    /// Memory at the peak: both, 22 bytes an entry in f64, and 12 a row and column.
+    pub fn build(matrix: CompressedRows, grid: Option<&Grid>) -> Self {
+        tile::build(matrix, grid)
+    }
+
     /// m.
     pub fn rows(&self) -> usize {
-        each_storage!(self, a => a.rows())
+        self.cut().rows
     }
 
     /// n.
     pub fn columns(&self) -> usize {
-        each_storage!(self, a => a.cols())
+        self.cut().columns
     }
 
     /// Stored entries, explicit zeros included.
     pub fn entries(&self) -> usize {
-        each_storage!(self, a => a.nnz())
+        each_storage!(self, tiles => tiles.entries())
     }
 
-    /// Bytes of the stored arrays.
+    /// How rows and columns are cut.
+    pub fn cut(&self) -> &crate::kernel::tiles::Cut {
+        each_storage!(self, tiles => tiles.cut())
+    }
+
+    /// Bytes of the arrays that a traversal reads.
     pub fn bytes(&self) -> u64 {
-        let values = match self {
-            Self::Double(_) => f64::BYTES,
-            Self::Single(_) => f32::BYTES,
-            Self::Pattern(_) => <()>::BYTES,
-        };
-        (4 + values) * self.entries() as u64 + 8 * (self.rows() as u64 + 1)
+        fn of<V: Value>(tiles: &Tiles<V>) -> u64 {
+            let parts = tiles.parts();
+            (2 + V::BYTES) * tiles.entries() as u64
+                + 4 * parts.rows.len() as u64
+                + 16 * parts.table.len() as u64
+        }
+        let orders = self.order.row_at.as_ref().map_or(0, |rows| 4 * rows.len() as u64);
+        each_storage!(self, tiles => of(tiles)) + orders
     }
 
     /// Word for the way values are kept: `f64`, `f32` or `pattern`.
     pub fn storage_name(&self) -> &'static str {
-        match self {
-            Self::Double(_) => "f64",
-            Self::Single(_) => "f32",
-            Self::Pattern(_) => "pattern",
+        match self.tiles {
+            AnyTiles::Double(_) => "f64",
+            AnyTiles::Single(_) => "f32",
+            AnyTiles::Pattern(_) => "pattern",
         }
     }
 
-    /// Place of the first entry of each row, and one past the last: length m + 1.
-    pub fn pointers(&self) -> &[usize] {
-        each_storage!(self, a => a.indptr().into_raw_storage())
+    /// How a pass with so many lanes goes through the matrix: the way of fewer counted bytes,
+    /// unless [`StoredRows::go`] says which.
+    pub fn way(&self, lanes: usize) -> Way {
+        self.ways.of(lanes)
+    }
+
+    /// Makes every pass go this way. No result changes.
+    pub fn go(&mut self, way: Way) {
+        self.ways = Ways::both(way);
     }
 
     /// Row `i`, borrowed. Panics if `i` ≥ m.
     pub fn row(&self, i: usize) -> Row<'_> {
-        let range = self.pointers()[i]..self.pointers()[i + 1];
-        match self {
-            Self::Double(a) => Row {
-                columns: &a.indices()[range.clone()],
-                values: RowValues::Double(&a.data()[range]),
-            },
-            Self::Single(a) => Row {
-                columns: &a.indices()[range.clone()],
-                values: RowValues::Single(&a.data()[range]),
-            },
-            Self::Pattern(a) => Row { columns: &a.indices()[range], values: RowValues::Ones },
-        }
+        assert!(i < self.rows(), "row {i} of {}", self.rows());
+        let inner = self.order.inner_of.as_ref().map_or(i, |inner| inner[i] as usize);
+        Row { matrix: self, inner }
+    }
+
+    /// Where unknown `j` stands in the blocks v and s of a pass. Panics if `j` ≥ n.
+    pub fn place_of(&self, j: usize) -> usize {
+        self.order.columns.as_ref().map_or(j, |order| order.place_of[j] as usize)
+    }
+
+    /// Unknown at a place of v and s: the inverse of [`StoredRows::place_of`].
+    pub fn unknown_at(&self, place: usize) -> usize {
+        self.order.columns.as_ref().map_or(place, |order| order.unknown_at[place] as usize)
+    }
+
+    /// Entries of a row of a band in a tile, and the tile's first column.
+    fn find(&self, slice: usize, tile: usize, row: u16) -> (std::ops::Range<usize>, usize) {
+        each_storage!(self, tiles => {
+            let start = tiles.bounds(slice..slice + 1, tile).0;
+            let segments = tiles.segments(slice..slice + 1, tile);
+            let range = match segments.rows.binary_search(&row) {
+                Err(_) => 0..0,
+                Ok(place) => {
+                    let before: usize =
+                        segments.lengths[..place].iter().map(|&l| usize::from(l) + 1).sum();
+                    let first = start.entry + before;
+                    first..first + usize::from(segments.lengths[place]) + 1
+                }
+            };
+            (range, tile * tiles.cut().tile)
+        })
+    }
+
+    fn entry(&self, entry: usize, base: usize) -> (usize, f64) {
+        each_storage!(self, tiles => {
+            let parts = tiles.parts();
+            let place = base + usize::from(parts.columns[entry]);
+            (self.unknown_at(place), parts.values[entry].number())
+        })
     }
 
     /// Builds from compressed rows; for tests, small systems and sizes known to be right.
@@ -144,25 +196,11 @@ impl StoredRows {
         indices: Vec<u32>,
         values: Vec<f64>,
     ) -> Self {
-        Self::Double(
-            CsMatI::try_new((rows, columns), pointers, indices, values)
-                .map_err(|(.., error)| error)
-                .expect("valid compressed rows"),
-        )
+        Self::build(CompressedRows::from_compressed(rows, columns, pointers, indices, values), None)
     }
 
     /// Builds from a dense row-major array, keeping only non-zeros; for tests and small systems.
     pub fn from_dense(rows: usize, columns: usize, dense: &[f64]) -> Self {
-        assert_eq!(dense.len(), rows * columns, "one value per cell");
-        let mut pointers = vec![0];
-        let (mut indices, mut values) = (Vec::new(), Vec::new());
-        for row in dense.chunks(columns.max(1)).take(rows) {
-            for (j, &value) in row.iter().enumerate().filter(|(_, value)| **value != 0.0) {
-                indices.push(j as u32);
-                values.push(value);
-            }
-            pointers.push(values.len());
-        }
-        Self::from_compressed(rows, columns, pointers, indices, values)
+        Self::build(CompressedRows::from_dense(rows, columns, dense), None)
     }
 }

@@ -6,8 +6,8 @@
 use rayon::prelude::*;
 use sprs::CsMatI;
 
+use super::compressed::CompressedRows;
 use super::keep::Keep;
-use super::rows::StoredRows;
 use crate::kernel::Value;
 
 /// What several entries at the same row and column mean.
@@ -56,7 +56,7 @@ pub struct Unsettled<V> {
 #[derive(Debug)]
 pub struct Settled {
     /// Columns ascend and do not repeat.
-    pub matrix: StoredRows,
+    pub matrix: CompressedRows,
     /// Entries that are no longer entries of their own.
     pub duplicates: u64,
 }

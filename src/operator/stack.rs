@@ -4,18 +4,22 @@
 
 use crate::operator::{Frame, Operator, Pass, Scratch, Weighted};
 
-/// [W A; λ P] D over a borrowed W A D: u has m + n rows. A pass costs one of W A D and 40 bytes an
+/// [W A; λ P] D over a borrowed W A D: u has m + n rows,
+/// the last n in inner order. A pass costs one of W A D and 40 bytes an
 /// unknown and lane.
 pub struct Stacked<'a> {
     top: &'a Weighted<'a>,
-    /// p, one factor per unknown; `None` means 1.
-    penalty: Option<&'a [f64]>,
+    /// p in inner order, one factor per unknown; `None` means 1.
+    penalty: Option<Vec<f64>>,
 }
 
 impl<'a> Stacked<'a> {
     /// Panics if `penalty` does not hold one value per column.
     pub fn new(top: &'a Weighted<'a>, penalty: Option<&'a [f64]>) -> Self {
         assert!(penalty.is_none_or(|p| p.len() == top.columns()), "one factor per column");
+        let matrix = top.matrix();
+        let penalty =
+            penalty.map(|p| (0..p.len()).map(|place| p[matrix.unknown_at(place)]).collect());
         Self { top, penalty }
     }
 }
@@ -47,8 +51,8 @@ impl Operator for Stacked<'_> {
             scratch,
         });
         for (j, u) in penalty_rows.chunks_mut(k).enumerate() {
-            let scale = self.top.scale(j);
-            let p = self.penalty.map_or(1.0, |p| p[j]);
+            let scale = self.top.scale_at(j);
+            let p = self.penalty.as_ref().map_or(1.0, |p| p[j]);
             let forward = if frame == Frame::Step { scale * p } else { p };
             for l in 0..k {
                 u[l] = strengths[l] * forward * v[j * k + l] - alpha[l] * u[l];

@@ -2,12 +2,15 @@
 
 use std::ops::Range;
 
+use rayon::prelude::*;
+
+use crate::base::sums::{PARALLEL_MIN, PIECE};
 use crate::each_storage;
-use crate::kernel::{self, Factors};
+use crate::kernel::{self, Block, Factors, Room, Twin, Way};
 use crate::operator::{Frame, Operator, Pass, RowWeights, Scratch, StoredRows};
 
-/// Most groups of rows with a partial s of their own: each costs n·k numbers.
-const GROUPS_MAX: usize = 8;
+/// Units that the scatter of a pass is to have: tiles times groups.
+const UNITS: usize = 64;
 
 /// Entries that a group must hold for each column before its partial s is worth adding up.
 const ENTRIES_PER_COLUMN_MIN: usize = 8;
@@ -16,16 +19,30 @@ const ENTRIES_PER_COLUMN_MIN: usize = 8;
 pub struct Weighted<'a> {
     matrix: &'a StoredRows,
     weights: &'a RowWeights,
-    /// D; `None` means 1. A zero holds its unknown at the start model.
+    /// D in file order; `None` means 1. A zero holds its unknown at the start model.
     scales: Option<&'a [f64]>,
+    /// D in inner order.
+    inner_scales: Option<Vec<f64>>,
     groups: Vec<Range<usize>>,
+    twin: Twin,
 }
 
 impl<'a> Weighted<'a> {
     /// Panics if `scales` does not hold one value per column.
     pub fn new(matrix: &'a StoredRows, weights: &'a RowWeights, scales: Option<&'a [f64]>) -> Self {
         assert!(scales.is_none_or(|d| d.len() == matrix.columns()), "one scale per column");
-        Self { matrix, weights, scales, groups: groups(matrix) }
+        let inner_scales =
+            scales.map(|d| (0..d.len()).map(|place| d[matrix.unknown_at(place)]).collect());
+        let twin = Twin::current();
+        Self { matrix, weights, scales, inner_scales, groups: groups(matrix), twin }
+    }
+
+    /// The same with the inner loops of one twin, whatever the environment asks for.
+    ///
+    /// Panics if this processor cannot run it.
+    pub fn with_twin(self, twin: Twin) -> Self {
+        assert!(twin.is_available(), "a twin that this processor can run");
+        Self { twin, ..self }
     }
 
     /// A, as stored.
@@ -56,36 +73,44 @@ impl<'a> Weighted<'a> {
         squares
     }
 
-    fn scale_into(&self, v: &[f64], k: usize, scaled: &mut [f64]) {
-        for ((out, v), j) in scaled.chunks_mut(k).zip(v.chunks(k)).zip(0..) {
-            let d = self.scale(j);
-            for (out, v) in out.iter_mut().zip(v) {
-                *out = d * v;
-            }
-        }
+    /// D of the unknown at a place of v and s.
+    pub(super) fn scale_at(&self, place: usize) -> f64 {
+        self.inner_scales.as_ref().map_or(1.0, |d| d[place])
     }
 }
 
-/// Contiguous groups of rows with about equal entries. From the matrix alone, so that the order
-/// of sums is too.
-fn groups(matrix: &StoredRows) -> Vec<Range<usize>> {
-    let entries = matrix.entries();
-    let wanted = entries / (ENTRIES_PER_COLUMN_MIN * matrix.columns().max(1));
-    let count = wanted.clamp(1, GROUPS_MAX);
-    let pointers = matrix.pointers();
-    let mut groups = Vec::with_capacity(count);
-    let mut first = 0;
-    for g in 1..=count {
-        let target = entries * g / count;
-        let last = if g == count {
-            matrix.rows()
-        } else {
-            pointers.partition_point(|&p| p < target).clamp(first, matrix.rows())
-        };
-        groups.push(first..last);
-        first = last;
+/// out ← D v, or out ← D out where there is no v.
+fn scale(d: &[f64], k: usize, v: Option<&[f64]>, out: &mut [f64]) {
+    let rows = PIECE / 4;
+    let piece = |(place, out): (usize, &mut [f64])| {
+        let from = place * rows;
+        for (i, out) in out.chunks_exact_mut(k).enumerate() {
+            let d = d[from + i];
+            match v {
+                Some(v) => {
+                    let v = &v[(from + i) * k..][..k];
+                    out.iter_mut().zip(v).for_each(|(out, v)| *out = d * v);
+                }
+                None => out.iter_mut().for_each(|out| *out *= d),
+            }
+        }
+    };
+    if out.len() < PARALLEL_MIN {
+        out.chunks_mut(rows * k).enumerate().for_each(piece);
+    } else {
+        out.par_chunks_mut(rows * k).enumerate().for_each(piece);
     }
-    groups
+}
+
+/// Contiguous groups of slices with about equal entries. From the matrix alone, so that the order
+/// of sums is too. One where the tiles are units enough.
+fn groups(matrix: &StoredRows) -> Vec<Range<usize>> {
+    let (cut, entries) = (matrix.cut(), matrix.entries());
+    let worth = entries / (ENTRIES_PER_COLUMN_MIN * cut.columns.max(1));
+    let wanted = UNITS.div_ceil(cut.tiles().max(1)).min(worth).clamp(1, cut.slices().max(1));
+    // Slices have equal rows; those of rays have about equal entries too.
+    let bound = |group: usize| cut.slices() * group / wanted;
+    (0..wanted).map(|group| bound(group)..bound(group + 1)).collect()
 }
 
 impl Operator for Weighted<'_> {
@@ -103,12 +128,14 @@ impl Operator for Weighted<'_> {
         let n_k = self.columns() * k;
         assert!(v.len() == n_k && s.len() == n_k, "v and s are n×k");
         assert!(u.len() == self.rows() * k, "u is m×k");
-        let Scratch { scaled, partial, partial_squares } = scratch;
-        let v = if frame == Frame::Step && self.scales.is_some() {
-            self.scale_into(v, k, &mut scaled[..n_k]);
-            &scaled[..n_k]
-        } else {
-            v
+        let Scratch { scaled, room } = scratch;
+        let v = match &self.inner_scales {
+            Some(d) if frame == Frame::Step => {
+                let scaled = &mut scaled[..n_k];
+                scale(d, k, Some(v), scaled);
+                &*scaled
+            }
+            _ => v,
         };
         let certificate = frame == Frame::Certificate;
         let factors = |i: usize, l: usize| {
@@ -119,45 +146,41 @@ impl Operator for Weighted<'_> {
                 Factors { dot: w, scatter: w, square: 1.0 }
             }
         };
-        let lanes = kernel::Lanes { count: k, v, alpha, u, s, squares, partial, partial_squares };
-        each_storage!(self.matrix, a => {
-            let rows = kernel::Rows {
-                pointers: self.matrix.pointers(),
-                columns: a.indices(),
-                values: a.data(),
-                groups: &self.groups,
-            };
-            kernel::pass(rows, &factors, lanes);
-        });
-        if !certificate && let Some(scales) = self.scales {
-            for (s, d) in s.chunks_mut(k).zip(scales) {
-                s.iter_mut().for_each(|s| *s *= d);
-            }
+        let lanes = kernel::Lanes { count: k, v, alpha, u, s: &mut *s, squares, room };
+        let plan = kernel::pass::Plan {
+            groups: &self.groups,
+            row_at: self.matrix.order.row_at.as_deref(),
+            way: self.matrix.way(k),
+            twin: self.twin,
+        };
+        each_storage!(self.matrix, tiles => kernel::pass(tiles, &plan, &factors, lanes));
+        if !certificate && let Some(d) = &self.inner_scales {
+            scale(d, k, None, s);
         }
     }
 
     fn scratch(&self, lanes: usize) -> Scratch {
-        let n_k = self.columns() * lanes;
-        let groups = if self.groups.len() > 1 { self.groups.len() } else { 0 };
+        let scaled = if self.scales.is_some() { self.columns() * lanes } else { 0 };
         Scratch {
-            scaled: vec![0.0; if self.scales.is_some() { n_k } else { 0 }],
-            partial: vec![0.0; groups * n_k],
-            partial_squares: vec![0.0; groups * lanes],
+            scaled: Block::zeros(scaled),
+            room: Room::new(self.matrix.cut(), self.groups.len(), lanes),
         }
     }
 
     fn scratch_bytes(&self, lanes: usize) -> u64 {
-        let groups = if self.groups.len() > 1 { self.groups.len() } else { 0 };
-        let scaled = usize::from(self.scales.is_some());
-        8 * ((groups + scaled) * self.columns() * lanes + groups * lanes) as u64
+        let scaled = if self.scales.is_some() { self.columns() * lanes } else { 0 };
+        Block::bytes(scaled) + Room::bytes(self.matrix.cut(), self.groups.len(), lanes)
     }
 
     fn bytes_per_pass(&self, lanes: usize) -> u64 {
         let (m, n, k) = (self.rows() as u64, self.columns() as u64, lanes as u64);
         let groups = self.groups.len() as u64;
         let partials = if groups > 1 { 24 * groups * n * k } else { 16 * n * k };
-        // A partial s that stays in cache never reaches memory, but which does is the
-        // machine's affair; it is counted.
-        self.matrix.bytes() + 16 * m * k + 8 * n * k + partials
+        let traversals = match self.matrix.way(lanes) {
+            Way::OnePass => 1,
+            Way::TwoPhase => 2,
+        };
+        // What caches keep of v, s and a partial s is the machine's affair; each is counted once.
+        traversals * self.matrix.bytes() + 32 * m * k + 8 * n * k + partials
     }
 }

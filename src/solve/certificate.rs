@@ -4,8 +4,12 @@
 //!
 //! relative gradient = ‖AᵀW²(b−Ax) − λ²P²(x−x_ref)‖ / (‖[WA; λP]‖_F · ‖[W(b−Ax); λP(x−x_ref)]‖)
 
+use rayon::prelude::*;
+
 use crate::base::sums;
+use crate::kernel::Block;
 use crate::operator::{Frame, Operator, Pass};
+use crate::solve::pieces::PIECE_ROWS;
 use crate::solve::problem::{Problem, Solved};
 use crate::solve::stop::Stop;
 
@@ -100,17 +104,21 @@ pub fn certify(
 ) -> Vec<Certified> {
     let (m, n, k) = (problem.matrix.rows(), problem.unknowns(), candidates.len());
     assert!((1..=WIDTH_MAX).contains(&k), "one to {WIDTH_MAX} models a pass");
-    let mut u = vec![0.0; m * k];
-    let mut v = vec![0.0; n * k];
-    for (l, candidate) in candidates.iter().enumerate() {
-        for i in 0..m {
-            u[i * k + l] = problem.data[[i, candidate.set]];
+    let matrix = problem.matrix.matrix();
+    let mut u = Block::zeros(m * k);
+    let mut v = Block::zeros(n * k);
+    u.par_chunks_mut(k).enumerate().with_min_len(PIECE_ROWS).for_each(|(i, row)| {
+        for (u, candidate) in row.iter_mut().zip(&candidates) {
+            *u = problem.data[[i, candidate.set]];
         }
-        for (j, x) in candidate.model.iter().enumerate() {
-            v[j * k + l] = -x;
+    });
+    v.par_chunks_mut(k).enumerate().with_min_len(PIECE_ROWS).for_each(|(place, row)| {
+        let j = matrix.unknown_at(place);
+        for (v, candidate) in row.iter_mut().zip(&candidates) {
+            *v = -candidate.model[j];
         }
-    }
-    let mut s = vec![0.0; n * k];
+    });
+    let mut s = Block::zeros(n * k);
     let mut squares = vec![0.0; k];
     let sets: Vec<usize> = candidates.iter().map(|c| c.set).collect();
     problem.matrix.pass(Pass {
@@ -130,7 +138,7 @@ pub fn certify(
         .enumerate()
         .map(|(l, candidate)| {
             let residual: Vec<f64> = u.chunks(k).map(|row| row[l]).collect();
-            let pulled: Vec<f64> = s.chunks(k).map(|row| row[l]).collect();
+            let pulled: Vec<f64> = (0..n).map(|j| s[matrix.place_of(j) * k + l]).collect();
             finish(problem, frobenius, candidate, residual, &pulled, squares[l].sqrt())
         })
         .collect()

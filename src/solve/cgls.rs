@@ -13,6 +13,7 @@
 //! Sources: Hestenes & Stiefel, J. Res. NBS 49:409, 1952; Björck, Elfving & Strakoš, SIMAX
 //! 19:720, 1998 (attainable accuracy).
 
+use crate::kernel::Block;
 use crate::operator::{Frame, Operator, Pass, Scratch};
 use crate::solve::cgls_lane::LaneState;
 use crate::solve::pieces;
@@ -29,19 +30,19 @@ pub struct Cgls<'a> {
     problem: &'a Problem<'a>,
     operator: Box<dyn Operator + 'a>,
     /// Weighted data over penalty rows, as u before the start.
-    right: Vec<f64>,
+    right: Block,
     lanes: Vec<LaneState>,
     live: Vec<usize>,
     frozen: Vec<bool>,
-    u: Vec<f64>,
-    p: Vec<f64>,
+    u: Block,
+    p: Block,
     /// Product t, or the recomputed gradient.
-    t: Vec<f64>,
+    t: Block,
     /// Gradient.
-    g: Vec<f64>,
+    g: Block,
     /// −x, the v of a refresh.
-    x: Vec<f64>,
-    y: Vec<f64>,
+    x: Block,
+    y: Block,
     squares: Vec<f64>,
     sums: Vec<f64>,
     sets: Vec<usize>,
@@ -68,13 +69,13 @@ impl<'a> Cgls<'a> {
             lanes: (0..k).map(|l| LaneState::new(damping(l), frobenius[l])).collect(),
             live: (0..k).collect(),
             frozen: vec![false; k],
-            u: right.clone(),
+            u: Block::zeros(right.len()),
             right,
-            p: vec![0.0; n * k],
-            t: vec![0.0; n * k],
-            g: vec![0.0; n * k],
+            p: Block::zeros(n * k),
+            t: Block::zeros(n * k),
+            g: Block::zeros(n * k),
             x: problem.negative_origins(),
-            y: vec![0.0; n * k],
+            y: Block::zeros(n * k),
             squares: vec![0.0; k],
             sums: vec![0.0; 2 * pieces::count(n) * k],
             sets: problem.lanes.iter().map(|lane| lane.set).collect(),
@@ -158,7 +159,8 @@ impl<'a> Cgls<'a> {
     /// −x = −(x₀ + D y), the v of a refresh.
     fn hold_negative_model(&mut self) {
         let k = self.width();
-        for (j, (x, y)) in self.x.chunks_mut(k).zip(self.y.chunks(k)).enumerate() {
+        for (place, (x, y)) in self.x.chunks_mut(k).zip(self.y.chunks(k)).enumerate() {
+            let j = self.problem.matrix.matrix().unknown_at(place);
             let d = self.problem.matrix.scale(j);
             for l in 0..k {
                 x[l] = -(self.problem.origin_at(j, self.sets[l]) + d * y[l]);
@@ -326,13 +328,18 @@ impl Recurrence for Cgls<'_> {
             &mut self.y,
         ];
         for block in blocks {
-            pieces::pack(block, k, &kept);
+            let length = pieces::pack(block, k, &kept);
+            block.truncate(length);
         }
-        for list in [&mut self.squares, &mut self.strengths, &mut self.alpha] {
-            pieces::pack(list, k, &kept);
-        }
-        for list in [&mut self.factor, &mut self.fresh] {
-            pieces::pack(list, k, &kept);
+        for list in [
+            &mut self.squares,
+            &mut self.strengths,
+            &mut self.alpha,
+            &mut self.factor,
+            &mut self.fresh,
+        ] {
+            let length = pieces::pack(list, k, &kept);
+            list.truncate(length);
         }
         self.sums.truncate(2 * pieces::count(self.problem.unknowns()) * kept.len());
         self.due.truncate(kept.len());
@@ -363,9 +370,9 @@ impl Recurrence for Cgls<'_> {
     }
 
     fn workspace_bytes(&self) -> u64 {
-        let blocks =
-            [&self.right, &self.u, &self.p, &self.t, &self.g, &self.x, &self.y, &self.sums];
-        blocks.iter().map(|block| 8 * block.capacity() as u64).sum::<u64>()
+        let blocks = [&self.right, &self.u, &self.p, &self.t, &self.g, &self.x, &self.y];
+        blocks.iter().map(|block| Block::bytes(block.len())).sum::<u64>()
+            + 8 * self.sums.len() as u64
             + self.operator.scratch_bytes(self.lanes.len())
     }
 }

@@ -254,7 +254,8 @@ impl Run<'_, '_> {
                 continue;
             }
             let estimate = self.recurrence.estimate(place);
-            let fault = self.recurrence.fault(self.tracks[place].lane);
+            let fault =
+                self.recurrence.fault(self.tracks[place].lane).map(|f| self.problem.in_file(f));
             let reason = fault
                 .map(Stop::NotFinite)
                 .or_else(|| self.reason(place, &estimate, iteration))
@@ -362,9 +363,13 @@ impl Run<'_, '_> {
             let mut model = vec![0.0; n];
             self.recurrence.model(place, &mut model);
             step_norms.push(sums::norm(&model));
-            for (j, y) in model.iter_mut().enumerate() {
-                *y = self.problem.origin_at(j, track.set) + self.problem.matrix.scale(j) * *y;
-            }
+            let matrix = self.problem.matrix.matrix();
+            let model: Vec<f64> = (0..n)
+                .map(|j| {
+                    let y = model[matrix.place_of(j)];
+                    self.problem.origin_at(j, track.set) + self.problem.matrix.scale(j) * y
+                })
+                .collect();
             candidates.push(Candidate {
                 set: track.set,
                 strength: track.strength,

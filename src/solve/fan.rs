@@ -170,8 +170,8 @@ impl<'a, R: Rotations> Fan<'a, R> {
         let updates = &self.updates;
         let tracks = updates.len();
         let v = match (replay, &self.scouted) {
-            (Some(step), Some(scouted)) => &scouted.vectors[step],
-            _ => &self.process.v,
+            (Some(step), Some(scouted)) => scouted.vectors[step].as_slice(),
+            _ => &*self.process.v,
         };
         self.vectors.sweep(v, width, &mut self.sums, |v, vectors, sums| {
             let mut buffer = [0.0; PIECE_ROWS];

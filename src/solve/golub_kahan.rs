@@ -6,6 +6,7 @@
 //! traversal; then β = ‖û‖ and v ← (s/β − β v)/α. The same algebra as two products, to rounding.
 //! Source: Golub & Kahan, SIAM J. Numer. Anal. 2:205, 1965.
 
+use crate::kernel::Block;
 use crate::operator::{Frame, Operator, Pass, Scratch};
 use crate::solve::pieces;
 use crate::solve::problem::Problem;
@@ -18,9 +19,10 @@ pub struct GolubKahan<'a> {
     pub lanes: Vec<LaneState>,
     /// Lanes in the blocks, ascending.
     pub live: Vec<usize>,
-    u: Vec<f64>,
-    pub v: Vec<f64>,
-    s: Vec<f64>,
+    u: Block,
+    /// Inner order.
+    pub v: Block,
+    s: Block,
     squares: Vec<f64>,
     sums: Vec<f64>,
     sets: Vec<usize>,
@@ -78,7 +80,7 @@ impl<'a> GolubKahan<'a> {
             live: (0..k).collect(),
             u: problem.right_hand_sides(),
             v: problem.negative_origins(),
-            s: vec![0.0; n * k],
+            s: Block::zeros(n * k),
             squares: vec![0.0; k],
             sums: vec![0.0; pieces::count(n) * k],
             sets: problem.lanes.iter().map(|lane| lane.set).collect(),
@@ -101,8 +103,9 @@ impl<'a> GolubKahan<'a> {
         let scalars =
             |lane: &LaneState| lane.process.alphas.capacity() + lane.process.betas.capacity();
         let kept: usize = self.lanes.iter().map(scalars).sum();
-        let blocks = self.u.capacity() + self.v.capacity() + self.s.capacity() + self.sums.len();
-        8 * (blocks + kept) as u64 + self.operator.scratch_bytes(k)
+        let blocks: u64 =
+            [&self.u, &self.v, &self.s].map(|block| Block::bytes(block.len())).iter().sum();
+        blocks + 8 * (self.sums.len() + kept) as u64 + self.operator.scratch_bytes(k)
     }
 
     pub fn width(&self) -> usize {
@@ -218,13 +221,21 @@ impl<'a> GolubKahan<'a> {
         if kept.len() == k {
             return;
         }
-        for block in [&mut self.u, &mut self.v, &mut self.s, &mut self.sums] {
-            pieces::pack(block, k, &kept);
+        for block in [&mut self.u, &mut self.v, &mut self.s] {
+            let length = pieces::pack(block, k, &kept);
+            block.truncate(length);
         }
-        for list in [&mut self.squares, &mut self.alpha, &mut self.scale, &mut self.shift] {
-            pieces::pack(list, k, &kept);
+        for list in [
+            &mut self.sums,
+            &mut self.squares,
+            &mut self.alpha,
+            &mut self.scale,
+            &mut self.shift,
+            &mut self.strengths,
+        ] {
+            let length = pieces::pack(list, k, &kept);
+            list.truncate(length);
         }
-        pieces::pack(&mut self.strengths, k, &kept);
         self.stepping = kept.iter().map(|&place| self.stepping[place]).collect();
         self.sets = kept.iter().map(|&place| self.sets[place]).collect();
         self.live = kept.iter().map(|&place| self.live[place]).collect();

@@ -176,7 +176,8 @@ pub fn lane_of(block: &[f64], k: usize, l: usize, out: &mut [f64; PIECE_ROWS]) -
     rows
 }
 
-/// Where lane `l` of an m×k block u, or else of the n×k block Ãᵀu, first holds what is not finite.
+/// Where lane `l` of an m×k block u, or else of the n×k block Ãᵀu, first holds what is not finite;
+/// a column in inner order.
 pub fn locate(u: &[f64], s: &[f64], k: usize, l: usize) -> Fault {
     let first = |block: &[f64]| block.chunks(k).position(|row| !row[l].is_finite());
     match (first(u), first(s)) {
@@ -186,8 +187,10 @@ pub fn locate(u: &[f64], s: &[f64], k: usize, l: usize) -> Fault {
     }
 }
 
-/// Keeps the lanes at `kept` (ascending) of a rows×k block, in place; the block shrinks.
-pub fn pack(block: &mut Vec<f64>, k: usize, kept: &[usize]) {
+/// Moves the lanes at `kept` (ascending) of a rows×k block together, in place; returns what is left
+/// of its length.
+#[must_use]
+pub fn pack(block: &mut [f64], k: usize, kept: &[usize]) -> usize {
     let rows = block.len() / k;
     let width = kept.len();
     for i in 0..rows {
@@ -195,5 +198,5 @@ pub fn pack(block: &mut Vec<f64>, k: usize, kept: &[usize]) {
             block[i * width + to] = block[i * k + from];
         }
     }
-    block.truncate(rows * width);
+    rows * width
 }

@@ -1,9 +1,12 @@
 //! What the engine is given and what it hands back.
 
 use ndarray::ArrayView2;
+use rayon::prelude::*;
 
+use crate::kernel::Block;
 use crate::operator::{Operator, RowWeights, Stacked, Weighted};
-use crate::solve::stop::Stop;
+use crate::solve::pieces::PIECE_ROWS;
+use crate::solve::stop::{Fault, Stop};
 
 /// An iterative method, one pass an iteration for all lanes.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -109,35 +112,50 @@ impl Problem<'_> {
         (0..self.unknowns()).all(|j| matches!(self.matrix.scale(j), 0.0 | 1.0))
     }
 
-    /// u before the first pass: W b over λ P x_ref, rows×k.
-    pub fn right_hand_sides(&self) -> Vec<f64> {
+    /// A fault in the blocks, as the caller numbers unknowns.
+    pub fn in_file(&self, fault: Fault) -> Fault {
+        let (m, matrix) = (self.matrix.rows(), self.matrix.matrix());
+        match fault {
+            Fault::Column(place) => Fault::Column(matrix.unknown_at(place)),
+            Fault::Row(row) if row >= m => Fault::Row(m + matrix.unknown_at(row - m)),
+            other => other,
+        }
+    }
+
+    /// u before the first pass: W b over λ P x_ref, rows×k, penalty rows in inner order.
+    pub fn right_hand_sides(&self) -> Block {
         let (m, n, k) = (self.matrix.rows(), self.unknowns(), self.lanes.len());
         let penalty_rows = if self.stacked { n } else { 0 };
-        let mut u = vec![0.0; (m + penalty_rows) * k];
+        let mut u = Block::zeros((m + penalty_rows) * k);
         let weights: &RowWeights = self.matrix.weights();
-        for (i, row) in u.chunks_mut(k.max(1)).enumerate() {
-            for (out, lane) in row.iter_mut().zip(&self.lanes) {
-                *out = if i < m {
-                    weights.at(i, lane.set) * self.data[[i, lane.set]]
-                } else {
-                    let j = i - m;
-                    lane.strengths[0] * self.penalty_factor(j) * self.reference_at(j, lane.set)
-                };
+        u.par_chunks_mut(PIECE_ROWS * k.max(1)).enumerate().for_each(|(piece, rows)| {
+            for (i, row) in (piece * PIECE_ROWS..).zip(rows.chunks_mut(k.max(1))) {
+                for (out, lane) in row.iter_mut().zip(&self.lanes) {
+                    *out = if i < m {
+                        weights.at(i, lane.set) * self.data[[i, lane.set]]
+                    } else {
+                        let j = self.matrix.matrix().unknown_at(i - m);
+                        lane.strengths[0] * self.penalty_factor(j) * self.reference_at(j, lane.set)
+                    };
+                }
             }
-        }
+        });
         u
     }
 
-    /// −x₀ of every lane, n×k: v of the first pass.
-    pub fn negative_origins(&self) -> Vec<f64> {
+    /// −x₀ of every lane, n×k in inner order: v of the first pass.
+    pub fn negative_origins(&self) -> Block {
         let k = self.lanes.len();
-        let mut v = vec![0.0; self.unknowns() * k];
+        let mut v = Block::zeros(self.unknowns() * k);
         if self.start.is_some() || self.reference.is_some() {
-            for (j, row) in v.chunks_mut(k.max(1)).enumerate() {
-                for (out, lane) in row.iter_mut().zip(&self.lanes) {
-                    *out = -self.origin_at(j, lane.set);
+            v.par_chunks_mut(PIECE_ROWS * k.max(1)).enumerate().for_each(|(piece, rows)| {
+                for (place, row) in (piece * PIECE_ROWS..).zip(rows.chunks_mut(k.max(1))) {
+                    let j = self.matrix.matrix().unknown_at(place);
+                    for (out, lane) in row.iter_mut().zip(&self.lanes) {
+                        *out = -self.origin_at(j, lane.set);
+                    }
                 }
-            }
+            });
         }
         v
     }

@@ -10,6 +10,7 @@ use super::{
 };
 use super::{reference, sigma, stack};
 use crate::base::{Complaint, Warning};
+use crate::operator::StoredRows;
 
 /// What an error message needs to name a row.
 pub(super) struct Names<'a> {
@@ -82,7 +83,7 @@ impl System {
         let absent = absent.iter().any(|gone| *gone).then_some(absent);
         let left_out = leave_out(&mut data, parts.missing_nan, &names, &origins, &mut warnings)?;
         let (uncertainty, weights) = sigma::weigh(&data, origins, left_out.as_ref(), &names)?;
-        let matrix = stack::stack(matrices);
+        let matrix = StoredRows::build(stack::stack(matrices), parts.grid.as_ref());
         let data_shift = match &parts.linearisation {
             Some(point) => Some(linearise(&mut data, &matrix, point, absent.as_ref())?),
             None => None,

@@ -29,7 +29,7 @@ use std::path::PathBuf;
 use ndarray::Array2;
 
 use crate::base::Grid;
-use crate::operator::{RowWeights, StoredRows};
+use crate::operator::{CompressedRows, RowWeights, StoredRows};
 
 /// A checked system: all lengths agree, all weights are finite and not negative.
 #[derive(Debug)]
@@ -164,7 +164,7 @@ pub struct BlockPart {
     /// For messages, and in [`BlockSpan`].
     pub name: String,
     /// A of the block, rows of the block × n.
-    pub matrix: StoredRows,
+    pub matrix: CompressedRows,
     /// For messages.
     pub matrix_path: PathBuf,
     /// m×k.

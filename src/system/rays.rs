@@ -20,7 +20,7 @@
 use rayon::prelude::*;
 
 use crate::base::{Complaint, Grid};
-use crate::operator::StoredRows;
+use crate::operator::CompressedRows;
 
 mod walk;
 
@@ -115,7 +115,7 @@ impl From<RayFault> for Complaint {
 #[derive(Debug, Clone, PartialEq)]
 pub struct RayMatrix {
     /// Rays × unknowns: the length of ray i in the cell of unknown j, in the grid's unit.
-    pub matrix: StoredRows,
+    pub matrix: CompressedRows,
     /// Length of each ray inside the grid, inactive cells included; 0 for a ray that misses it.
     pub chords: Vec<f64>,
     /// How often a ray crossed a cell that is not an unknown. Those lengths are in no row.
@@ -169,7 +169,7 @@ pub fn matrix(grid: &Grid, segments: &[Segment]) -> Result<RayMatrix, RayFault> 
 
     let (indices, values) = builder.fill(segments, &pointers);
     let matrix =
-        StoredRows::from_compressed(segments.len(), grid.unknowns(), pointers, indices, values);
+        CompressedRows::from_compressed(segments.len(), grid.unknowns(), pointers, indices, values);
     Ok(RayMatrix { matrix, chords, inactive_crossings })
 }
 

@@ -5,32 +5,32 @@
 
 use sprs::CsMatI;
 
-use crate::operator::StoredRows;
+use crate::operator::CompressedRows;
 
 /// The rows of all parts in order; one part is handed back as it is. Values are kept in the
 /// widest way found among the parts: f64 over f32 over pattern.
 ///
 /// Panics if there is no part or the parts differ in their number of columns.
-pub fn stack(mut parts: Vec<StoredRows>) -> StoredRows {
+pub fn stack(mut parts: Vec<CompressedRows>) -> CompressedRows {
     assert!(!parts.is_empty(), "at least one matrix to stack");
     if parts.len() == 1 {
         return parts.remove(0);
     }
-    if parts.iter().any(|part| matches!(part, StoredRows::Double(_))) {
-        StoredRows::Double(stack_as(parts, append_double))
-    } else if parts.iter().any(|part| matches!(part, StoredRows::Single(_))) {
-        StoredRows::Single(stack_as(parts, append_single))
+    if parts.iter().any(|part| matches!(part, CompressedRows::Double(_))) {
+        CompressedRows::Double(stack_as(parts, append_double))
+    } else if parts.iter().any(|part| matches!(part, CompressedRows::Single(_))) {
+        CompressedRows::Single(stack_as(parts, append_single))
     } else {
-        StoredRows::Pattern(stack_as(parts, append_nothing))
+        CompressedRows::Pattern(stack_as(parts, append_nothing))
     }
 }
 
 fn stack_as<V>(
-    parts: Vec<StoredRows>,
-    append: fn(&StoredRows, &mut Vec<V>),
+    parts: Vec<CompressedRows>,
+    append: fn(&CompressedRows, &mut Vec<V>),
 ) -> CsMatI<V, u32, usize> {
-    let rows = parts.iter().map(StoredRows::rows).sum();
-    let entries = parts.iter().map(StoredRows::entries).sum();
+    let rows = parts.iter().map(CompressedRows::rows).sum();
+    let entries = parts.iter().map(CompressedRows::entries).sum();
     let columns = parts[0].columns();
     let mut pointers = Vec::with_capacity(rows + 1);
     pointers.push(0);
@@ -49,31 +49,31 @@ fn stack_as<V>(
         .expect("stacked valid rows are valid rows")
 }
 
-fn column_indices(part: &StoredRows) -> &[u32] {
+fn column_indices(part: &CompressedRows) -> &[u32] {
     match part {
-        StoredRows::Double(a) => a.indices(),
-        StoredRows::Single(a) => a.indices(),
-        StoredRows::Pattern(a) => a.indices(),
+        CompressedRows::Double(a) => a.indices(),
+        CompressedRows::Single(a) => a.indices(),
+        CompressedRows::Pattern(a) => a.indices(),
     }
 }
 
-fn append_double(part: &StoredRows, values: &mut Vec<f64>) {
+fn append_double(part: &CompressedRows, values: &mut Vec<f64>) {
     match part {
-        StoredRows::Double(a) => values.extend_from_slice(a.data()),
-        StoredRows::Single(a) => values.extend(a.data().iter().map(|&value| f64::from(value))),
-        StoredRows::Pattern(a) => values.extend(std::iter::repeat_n(1.0, a.nnz())),
+        CompressedRows::Double(a) => values.extend_from_slice(a.data()),
+        CompressedRows::Single(a) => values.extend(a.data().iter().map(|&value| f64::from(value))),
+        CompressedRows::Pattern(a) => values.extend(std::iter::repeat_n(1.0, a.nnz())),
     }
 }
 
-fn append_single(part: &StoredRows, values: &mut Vec<f32>) {
+fn append_single(part: &CompressedRows, values: &mut Vec<f32>) {
     match part {
-        StoredRows::Double(_) => unreachable!("a stack with an f64 part is kept as f64"),
-        StoredRows::Single(a) => values.extend_from_slice(a.data()),
-        StoredRows::Pattern(a) => values.extend(std::iter::repeat_n(1.0f32, a.nnz())),
+        CompressedRows::Double(_) => unreachable!("a stack with an f64 part is kept as f64"),
+        CompressedRows::Single(a) => values.extend_from_slice(a.data()),
+        CompressedRows::Pattern(a) => values.extend(std::iter::repeat_n(1.0f32, a.nnz())),
     }
 }
 
-fn append_nothing(part: &StoredRows, values: &mut Vec<()>) {
+fn append_nothing(part: &CompressedRows, values: &mut Vec<()>) {
     values.extend(std::iter::repeat_n((), part.entries()));
 }
 
@@ -81,19 +81,23 @@ fn append_nothing(part: &StoredRows, values: &mut Vec<()>) {
 mod tests {
     use super::*;
 
-    fn double() -> StoredRows {
-        StoredRows::from_dense(2, 3, &[1.0, 0.0, 2.0, 0.0, 0.5, 0.0])
+    fn double() -> CompressedRows {
+        CompressedRows::from_dense(2, 3, &[1.0, 0.0, 2.0, 0.0, 0.5, 0.0])
     }
 
-    fn single() -> StoredRows {
-        StoredRows::Single(CsMatI::try_new((1, 3), vec![0, 2], vec![0, 1], vec![3.0, 4.0]).unwrap())
+    fn single() -> CompressedRows {
+        CompressedRows::Single(
+            CsMatI::try_new((1, 3), vec![0, 2], vec![0, 1], vec![3.0, 4.0]).unwrap(),
+        )
     }
 
-    fn pattern() -> StoredRows {
-        StoredRows::Pattern(CsMatI::try_new((2, 3), vec![0, 0, 1], vec![2], vec![(); 1]).unwrap())
+    fn pattern() -> CompressedRows {
+        CompressedRows::Pattern(
+            CsMatI::try_new((2, 3), vec![0, 0, 1], vec![2], vec![(); 1]).unwrap(),
+        )
     }
 
-    fn dense(matrix: &StoredRows) -> Vec<Vec<f64>> {
+    fn dense(matrix: &CompressedRows) -> Vec<Vec<f64>> {
         (0..matrix.rows())
             .map(|i| {
                 let mut row = vec![0.0; matrix.columns()];

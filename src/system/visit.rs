@@ -1,6 +1,6 @@
 //! One visit of all rows, in parallel, with the same bits for any number of threads.
 //!
-//! Rows are cut into at most [`GROUPS_MAX`] groups of nearly equal numbers of entries. The cut
+//! Rows are cut into at most [`GROUPS_MAX`] groups of nearly equal numbers of rows. The cut
 //! depends on the matrix and the number of weightings alone. Each group sums its columns in row
 //! order; the groups are added in order.
 //!
@@ -71,16 +71,7 @@ fn row_groups(matrix: &StoredRows, weightings: usize) -> Vec<Range<usize>> {
     let (rows, entries) = (matrix.rows(), matrix.entries());
     let column_bytes = matrix.columns().max(1) * (28 + 8 * weightings);
     let groups = (12 * entries / column_bytes).clamp(1, GROUPS_MAX);
-    let pointers = matrix.pointers();
-    // In wide arithmetic: group × entries may pass 2⁶⁴ nowhere, but costs nothing to be sure of.
-    let cut = |group: usize| match group {
-        0 => 0,
-        group if group == groups => rows,
-        group => {
-            let target = (group as u128 * entries as u128 / groups as u128) as usize;
-            pointers.partition_point(|&pointer| pointer < target).min(rows)
-        }
-    };
+    let cut = |group: usize| rows * group / groups;
     (0..groups).map(|group| cut(group)..cut(group + 1)).collect()
 }
 

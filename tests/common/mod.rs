@@ -23,7 +23,8 @@ pub fn data_path(name: &str) -> PathBuf {
 }
 
 pub fn matrix(name: &str) -> StoredRows {
-    files::matrix::read(&data_path(name), &ReadOptions::default()).unwrap().value
+    let read = files::matrix::read(&data_path(name), &ReadOptions::default()).unwrap();
+    StoredRows::build(read.value, None)
 }
 
 pub fn vector(name: &str) -> Array2<f64> {

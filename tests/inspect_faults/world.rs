@@ -2,7 +2,7 @@
 
 use ellbow::base::random::Stream;
 use ellbow::base::{Axis, Grid};
-use ellbow::operator::StoredRows;
+use ellbow::operator::CompressedRows;
 use ellbow::system::findings::Trial;
 use ellbow::system::*;
 use ndarray::{Array2, Axis as Along};
@@ -75,7 +75,7 @@ impl World {
         };
         let block = BlockPart {
             name: String::new(),
-            matrix: StoredRows::from_compressed(m, self.n, pointers, indices, values),
+            matrix: CompressedRows::from_compressed(m, self.n, pointers, indices, values),
             matrix_path: "matrix.mtx".into(),
             data: column(&self.data),
             data_path: "data.npy".into(),

@@ -13,13 +13,13 @@ use crate::base::{Complaint, Warning};
 use crate::operator::build::{Buckets, RowCounts, RunCounter, Scatter};
 use crate::operator::keep::Keep;
 use crate::operator::settle::Settled;
-use crate::operator::{Duplicates, Precision, StoredRows};
+use crate::operator::{CompressedRows, Duplicates, Precision};
 
 /// Reads a Matrix Market file, plain or gzip, as a system matrix.
 pub fn read_matrix(
     source: &Source,
     options: &ReadOptions,
-) -> Result<Loaded<StoredRows>, FileError> {
+) -> Result<Loaded<CompressedRows>, FileError> {
     let bad = |complaint| source.bad(complaint);
     let header = checked_header(source).map_err(bad)?;
     let leniency = Leniency {
@@ -48,7 +48,7 @@ fn report(
     tally: &Tally,
     settled: Settled,
     rule: Duplicates,
-) -> Loaded<StoredRows> {
+) -> Loaded<CompressedRows> {
     let packed = if source.text().is_packed() { ", gzip" } else { "" };
     let facts = Facts {
         format: header.format() + packed,

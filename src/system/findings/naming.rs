@@ -23,7 +23,7 @@ pub(super) fn find(system: &System) -> Option<Finding> {
     let mut named = [0usize; 3];
     for i in (0..ids.len()).step_by(step) {
         let row = system.matrix.row(i);
-        if row.columns.len() > ENTRIES_MAX {
+        if row.entries().nth(ENTRIES_MAX).is_some() {
             continue;
         }
         for (j, _) in row.entries() {
