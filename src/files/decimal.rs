@@ -7,7 +7,7 @@
 //! to stay in the nearest cache and no result is subnormal or infinite; everything else, and what
 //! the algorithm leaves open, is for fast-float2. Every answer is correctly rounded.
 
-use super::eight::{TENS, digits, word_at};
+use super::eight::{TENS, digits, eight_digits, word_at};
 
 /// The least and the greatest power of ten that is not left to fast-float2.
 const POWER_MIN: i32 = -54;
@@ -52,15 +52,17 @@ pub fn ordinary(bytes: &[u8]) -> Option<(f64, usize)> {
 #[inline(always)]
 fn append(mut number: u64, bytes: &[u8], mut at: usize) -> Option<(u64, usize)> {
     loop {
-        let (count, more) = digits(word_at(bytes, at));
-        if number >= FULL[count] {
+        let word = word_at(bytes, at);
+        let Some(more) = eight_digits(word) else {
+            let (count, more) = digits(word);
+            let fits = number < FULL[count];
+            return fits.then(|| (number * TENS[count] + more, at + count));
+        };
+        if number >= FULL[8] {
             return None;
         }
-        number = number * TENS[count] + more;
-        at += count;
-        if count < 8 {
-            return Some((number, at));
-        }
+        number = number * TENS[8] + more;
+        at += 8;
     }
 }
 
