@@ -1,6 +1,12 @@
 //! Speed of reading a matrix from text, beside what reading the same bytes once from memory takes.
 //!
-//! `cargo bench --bench load [-- MEGABYTES]`; the default is 200.
+//! `cargo bench --bench load [-- MEGABYTES]` writes files of that size (200 unless said) and reads
+//! each three times, checking what it gets.
+//!
+//! `cargo bench --bench load -- --file MATRIX.mtx --json` reads a file of yours once and prints a
+//! line of JSON: seconds, bytes of the file, entries of the matrix, and the two divided.
+//!
+//! The number of threads is that of `RAYON_NUM_THREADS`, or of the processors.
 
 use std::io::Write;
 use std::path::Path;
@@ -21,7 +27,34 @@ const KINDS: [(&str, &str, bool); 4] = [
 ];
 
 fn main() {
-    let megabytes: u64 = std::env::args().filter_map(|a| a.parse().ok()).next().unwrap_or(200);
+    let words: Vec<String> = std::env::args().skip(1).collect();
+    let file = words.iter().position(|word| word == "--file");
+    if let Some(place) = file {
+        let path = words.get(place + 1).expect("--file is followed by a path");
+        return once(Path::new(path), words.iter().any(|word| word == "--json"));
+    }
+    generated(words.iter().filter_map(|word| word.parse().ok()).next().unwrap_or(200));
+}
+
+/// Reads a file once: no second reading that would find it in a warmer machine.
+fn once(path: &Path, json: bool) {
+    let bytes = std::fs::metadata(path).expect("the file is there").len();
+    let start = Instant::now();
+    let loaded = matrix::read(path, &ReadOptions::default());
+    let seconds = start.elapsed().as_secs_f64();
+    let entries = loaded.unwrap_or_else(|error| panic!("{error}")).value.entries();
+    let speed = bytes as f64 / seconds / 1e6;
+    if json {
+        let record = serde_json::json!({
+            "seconds": seconds, "bytes": bytes, "entries": entries, "megabytes_per_second": speed,
+        });
+        println!("{record}");
+    } else {
+        println!("{seconds:.3} s, {speed:.1} MB/s, {entries} entries");
+    }
+}
+
+fn generated(megabytes: u64) {
     let home = tempfile::tempdir().expect("a temporary folder");
     println!("{} threads", rayon::current_num_threads());
     for (name, field, mixed) in KINDS {

@@ -84,6 +84,8 @@ fn gz(text: &[u8]) -> Vec<u8> {
     out.finish().unwrap()
 }
 
+/// The bounds leave room for what is made of the matrix while it is still there: 24 bytes an entry
+/// in all, 12 for a pattern.
 fn check(path: &Path, storage: &str, bound: f64) {
     let (loaded, bytes) = peak(|| matrix::read(path, &ReadOptions::default()).unwrap());
     assert_eq!((loaded.value.storage_name(), loaded.value.entries()), (storage, ENTRIES as usize));
@@ -106,12 +108,12 @@ fn reading_keeps_within_its_bounds() {
     };
     for mixed in [false, true] {
         let order = if mixed { "mixed" } else { "ordered" };
-        check(&file(&format!("real_{order}.mtx"), &text("real", mixed)), "f64", 24.0);
-        check(&file(&format!("pattern_{order}.mtx"), &text("pattern", mixed)), "pattern", 12.0);
+        check(&file(&format!("real_{order}.mtx"), &text("real", mixed)), "f64", 20.0);
+        check(&file(&format!("pattern_{order}.mtx"), &text("pattern", mixed)), "pattern", 11.0);
     }
-    check(&file("integer.mtx", &text("integer", true)), "f32", 24.0);
-    check(&file("real.mtx.gz", &gz(&text("real", true))), "f64", 24.0);
-    check(&file("pattern.mtx.gz", &gz(&text("pattern", false))), "pattern", 12.0);
+    check(&file("integer.mtx", &text("integer", true)), "f32", 20.0);
+    check(&file("real.mtx.gz", &gz(&text("real", true))), "f64", 20.0);
+    check(&file("pattern.mtx.gz", &gz(&text("pattern", false))), "pattern", 11.0);
     one_dense_row_out_of_order(&file);
     hostile_files_stay_small(&file);
     damaged_files_stay_small(&file);
@@ -122,7 +124,8 @@ fn one_dense_row_out_of_order(file: &dyn Fn(&str, &[u8]) -> PathBuf) {
     let mut out = Vec::new();
     writeln!(out, "%%MatrixMarket matrix coordinate real general\n1 {ENTRIES} {ENTRIES}").unwrap();
     (0..ENTRIES).for_each(|k| writeln!(out, "1 {} {}.1", ENTRIES - k, k % 10).unwrap());
-    check(&file("row.mtx", &out), "f64", 24.0);
+    // 12 of the matrix and 8 of the keys it is sorted by; the rest does not grow with the entries.
+    check(&file("row.mtx", &out), "f64", 20.0 + 4096.0 / ENTRIES as f64);
 }
 
 const MEBIBYTE: usize = 1 << 20;

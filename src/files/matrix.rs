@@ -36,21 +36,24 @@ pub fn read(path: &Path, options: &ReadOptions) -> Result<Loaded<CompressedRows>
         Kind::Npy => dense::read_matrix(&source, options),
         Kind::Zip => npz::read_matrix(&source, options),
         kind @ (Kind::Gzip | Kind::Other) => {
-            let mut text = source.text();
-            let head = text.batch().map_err(|complaint| source.bad(complaint))?;
-            match head {
-                Some(head) if matrix_market::recognise(head) => {
-                    matrix_market::read_matrix(&source, options)
-                }
-                Some(head) if kind == Kind::Gzip => Err(source.bad(unknown_inside(head))),
-                None => Err(source.bad(Complaint::new(
-                    "the compressed file is empty inside",
-                    "check how it was written or copied",
-                ))),
-                _ => Err(source.unreadable(kind, ACCEPTED)),
-            }
+            recognise(&source, kind)?;
+            matrix_market::read_matrix(&source, options)
         }
         kind @ Kind::Foreign(..) => Err(source.unreadable(kind, ACCEPTED)),
+    }
+}
+
+/// Looks at the beginning of a text, which may be compressed.
+fn recognise(source: &Source, kind: Kind) -> Result<(), FileError> {
+    let mut text = source.text();
+    match text.batch().map_err(|complaint| source.bad(complaint))? {
+        Some(head) if matrix_market::recognise(head) => Ok(()),
+        Some(head) if kind == Kind::Gzip => Err(source.bad(unknown_inside(head))),
+        None => Err(source.bad(Complaint::new(
+            "the compressed file is empty inside",
+            "check how it was written or copied",
+        ))),
+        _ => Err(source.unreadable(kind, ACCEPTED)),
     }
 }
 

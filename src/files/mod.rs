@@ -5,8 +5,10 @@
 //! allocation that its own length cannot justify.
 
 mod complain;
+mod decimal;
 mod dense;
 mod dtype;
+mod eight;
 mod folder;
 pub mod identity;
 pub mod job_file;

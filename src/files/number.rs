@@ -1,5 +1,9 @@
 //! Numbers in text: whole ones by an own loop, real ones by fast-float2, with the exponent letters
-//! `d` and `D` of Fortran. A number followed by anything is not a number.
+//! `d` and `D` of Fortran. A number followed by anything is not a number. The quick ways give the
+//! same values for what is usual.
+
+use super::decimal::ordinary;
+use super::eight::{TENS, digits, word_at};
 
 /// A real number as read.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -65,28 +69,26 @@ pub fn whole(token: &[u8]) -> Whole {
     }
 }
 
-/// Longest run of digits that cannot overflow u64.
-const DIGITS_QUICK: usize = 18;
-
-/// Digits at the start of `bytes`: value and number; `None` where the slow way must look.
+/// Digits at the start of `bytes`, at most 15 of them: value and number; `None` where the slow way
+/// must look.
 #[inline(always)]
 pub fn quick_whole(bytes: &[u8]) -> Option<(u64, usize)> {
-    let mut value = 0u64;
-    let mut count = 0;
-    while let Some(digit) = bytes.get(count).map(|b| b.wrapping_sub(b'0')).filter(|&d| d < 10) {
-        if count == DIGITS_QUICK {
-            return None;
+    let (count, value) = digits(word_at(bytes, 0));
+    match count {
+        0 => None,
+        8 => {
+            let (more, low) = digits(word_at(bytes, 8));
+            let value = value * TENS[more] + low;
+            (more < 8).then_some((value, 8 + more))
         }
-        value = 10 * value + u64::from(digit);
-        count += 1;
+        _ => Some((value, count)),
     }
-    (count > 0).then_some((value, count))
 }
 
 /// A real number at the start of `bytes`: its value and length.
 #[inline(always)]
 pub fn quick_real(bytes: &[u8]) -> Option<(f64, usize)> {
-    fast_float2::parse_partial(bytes).ok()
+    ordinary(bytes).or_else(|| fast_float2::parse_partial(bytes).ok())
 }
 
 #[cfg(test)]
@@ -132,7 +134,8 @@ mod tests {
         for text in [&b""[..], b"+", b"1.0", b"1e3", b"0x3"] {
             assert_eq!(whole(text), Whole::NotOne);
         }
-        assert_eq!(quick_whole(b"123456789012345678 "), Some((123_456_789_012_345_678, 18)));
-        assert_eq!(quick_whole(b"1234567890123456789"), None);
+        assert_eq!(quick_whole(b"123456789012345 "), Some((123_456_789_012_345, 15)));
+        assert_eq!(quick_whole(b"12345678"), Some((12_345_678, 8)));
+        assert_eq!(quick_whole(b"1234567890123456"), None);
     }
 }

@@ -2,6 +2,7 @@
 
 use std::fs::File;
 use std::io::{self, Read};
+use std::ops::ControlFlow;
 use std::path::{Path, PathBuf};
 
 use flate2::bufread::MultiGzDecoder;
@@ -12,6 +13,10 @@ use crate::base::Complaint;
 
 /// Text is worked through in batches of this size, so that memory is bounded whatever the file.
 pub const BATCH_BYTES: usize = 4 << 20;
+
+/// Of compressed text two batches exist at once, one being filled beside the one being read, so
+/// they are smaller; still longer than any line may be.
+const UNPACKED_BYTES: usize = 2 << 20;
 
 /// Each batch is cut at line ends into pieces of this size, the unit of parallel work.
 const PIECE_BYTES: usize = 256 << 10;
@@ -133,6 +138,8 @@ struct Unpacked<'a> {
     /// Bytes of the buffer already consumed.
     used: usize,
     ended: bool,
+    /// A buffer to be the next.
+    spare: Vec<u8>,
 }
 
 impl<'a> Text<'a> {
@@ -142,6 +149,7 @@ impl<'a> Text<'a> {
             buffer: Vec::new(),
             used: 0,
             ended: false,
+            spare: Vec::new(),
         });
         Self { raw, at: 0, unpacked }
     }
@@ -182,6 +190,40 @@ impl<'a> Text<'a> {
         }
     }
 
+    /// Hands all that is left to `work`, batch by batch, until it breaks off or complains.
+    ///
+    /// Compressed text is inflated beside the work: while one batch is worked on, another thread of
+    /// the pool, if it has one to spare, fills the next. Nothing waits for a thread, so this works
+    /// with one as well; two buffers are all it takes.
+    ///
+    /// # Errors
+    /// Those of `work` and of the compressed stream, whichever comes first in the text.
+    pub fn each(
+        mut self,
+        mut work: impl FnMut(&[u8]) -> Result<ControlFlow<()>, Complaint> + Send,
+    ) -> Result<ControlFlow<()>, Complaint> {
+        while let Some(length) = self.batch()?.map(<[u8]>::len) {
+            let flow = if let Some(unpacked) = &mut self.unpacked {
+                let batch = unpacked.hand_over(length);
+                let (flow, filled) = rayon::join(|| work(&batch), || unpacked.fill());
+                unpacked.spare = batch;
+                let flow = flow?;
+                if flow.is_continue() {
+                    filled.map_err(damaged)?;
+                }
+                flow
+            } else {
+                let flow = work(&self.raw[self.at..self.at + length])?;
+                self.consume(length);
+                flow
+            };
+            if flow.is_break() {
+                return Ok(flow);
+            }
+        }
+        Ok(ControlFlow::Continue(()))
+    }
+
     /// Length of the whole text, by decompressing it once where needed.
     ///
     /// # Errors
@@ -195,14 +237,26 @@ impl<'a> Text<'a> {
 }
 
 impl Unpacked<'_> {
+    /// Gives away the first `length` bytes that are not consumed; the rest stays to be gone on with.
+    fn hand_over(&mut self, length: usize) -> Vec<u8> {
+        let mut batch = std::mem::replace(&mut self.buffer, std::mem::take(&mut self.spare));
+        batch.drain(..self.used);
+        self.used = 0;
+        self.buffer.clear();
+        self.buffer.reserve_exact(UNPACKED_BYTES);
+        self.buffer.extend_from_slice(&batch[length..]);
+        batch.truncate(length);
+        batch
+    }
+
     /// Drops what was consumed and fills the buffer up.
     fn fill(&mut self) -> io::Result<()> {
         self.buffer.drain(..self.used);
         self.used = 0;
         if self.buffer.capacity() == 0 {
-            self.buffer.reserve_exact(BATCH_BYTES);
+            self.buffer.reserve_exact(UNPACKED_BYTES);
         }
-        let wanted = BATCH_BYTES - self.buffer.len();
+        let wanted = UNPACKED_BYTES - self.buffer.len();
         if !self.ended && wanted > 0 {
             let got = (&mut self.decoder).take(wanted as u64).read_to_end(&mut self.buffer)?;
             self.ended = got < wanted;
@@ -275,7 +329,7 @@ mod tests {
     fn batches_and_pieces_hold_every_byte_once() {
         let long: Vec<u8> =
             (0..900_000).flat_map(|k: u32| format!("{k} {}\n", k * 7).into_bytes()).collect();
-        assert!(long.len() > 3 * BATCH_BYTES);
+        assert!(long.len() > 3 * UNPACKED_BYTES);
         for text in [&long[..], &long[..long.len() - 1], b"one", b"a\n\nb\n"] {
             assert!(lines(text) == text);
             assert!(lines(&gz(text)) == text);

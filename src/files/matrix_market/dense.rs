@@ -1,5 +1,7 @@
 //! Vectors and data sets: an array, or a coordinate file of one column; what is missing is 0.
 
+use std::ops::ControlFlow;
+
 use ndarray::Array2;
 
 use super::super::source::Source;
@@ -32,7 +34,7 @@ pub fn read_dense(
     };
     let values = Array2::zeros((header.rows, header.columns));
     let mut placing = Placing { values, seen };
-    let tally = entries.pass(&mut placing).map_err(bad)?;
+    let tally = entries.pass(&mut placing).map_err(bad)?.unwrap_or_default();
     let packed = if source.text().is_packed() { ", gzip" } else { "" };
     let facts = Facts {
         format: header.format() + packed,
@@ -61,7 +63,11 @@ impl Collector for Placing {
         piece.push((line, row, column, value));
     }
 
-    fn batch(&mut self, pieces: Vec<(u64, Self::Piece)>) -> Result<(), Complaint> {
+    fn batch(
+        &mut self,
+        pieces: Vec<(u64, Self::Piece)>,
+        _: bool,
+    ) -> Result<ControlFlow<()>, Complaint> {
         for (before, piece) in pieces {
             for (line, row, column, value) in piece {
                 if self.seen.get_mut(row).is_some_and(|seen| std::mem::replace(seen, true)) {
@@ -74,6 +80,6 @@ impl Collector for Placing {
                 self.values[[row, column as usize]] = value;
             }
         }
-        Ok(())
+        Ok(ControlFlow::Continue(()))
     }
 }

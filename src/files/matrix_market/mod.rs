@@ -1,7 +1,7 @@
 //! Matrix Market files: the NIST exchange format (Boisvert, Pozo & Remington, NISTIR 5935, 1996).
 //!
 //! [`header`] reads banner and size, [`walk`] one piece of entries, [`pass`] the whole text in
-//! parallel pieces, [`load`] builds the matrix in two passes and [`dense`] a vector in one.
+//! parallel pieces, [`rows`] the row numbers alone; [`load`] builds the matrix and [`dense`] a vector.
 
 mod dense;
 mod header;
@@ -9,6 +9,7 @@ mod load;
 mod pass;
 mod places;
 mod quick;
+mod rows;
 mod walk;
 
 pub use dense::read_dense;

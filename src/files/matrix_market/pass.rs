@@ -1,22 +1,33 @@
 //! One pass over all entries, in parallel pieces whose results come in file order.
 
+use std::ops::ControlFlow;
+
 use rayon::prelude::*;
 
 use super::super::complain::{changed, justify_rows};
 use super::super::source::{Source, Text, pieces};
 use super::header::{Header, Layout};
+use super::rows;
 use super::walk::{Leniency, Tally, Walk};
 use crate::base::Complaint;
+use crate::operator::build::{RowCounts, RunCounter};
 
 /// What each piece of a pass does with its entries.
-pub trait Collector: Sync {
+pub trait Collector: Send + Sync {
     /// What one piece collects.
     type Piece: Send;
     fn start(&self) -> Self::Piece;
     /// One entry: line in the piece from 1; row, column from 0; value.
     fn take(&self, piece: &mut Self::Piece, line: u64, row: usize, column: u32, value: f64);
-    /// The pieces of one batch, in order, each with the number of lines before it.
-    fn batch(&mut self, pieces: Vec<(u64, Self::Piece)>) -> Result<(), Complaint>;
+    /// After a piece's last entry, while other pieces may still be read.
+    fn end(&self, _: &mut Self::Piece) {}
+    /// The pieces of one batch, in order, each with the number of lines before it; `single` if f32
+    /// holds each value of the batch exactly. Breaking off ends the pass.
+    fn batch(
+        &mut self,
+        pieces: Vec<(u64, Self::Piece)>,
+        single: bool,
+    ) -> Result<ControlFlow<()>, Complaint>;
 }
 
 /// A file under its header.
@@ -27,20 +38,16 @@ pub struct Entries<'a> {
 }
 
 impl Entries<'_> {
-    /// Goes through the file once. The tally covers the whole file and holds no fault.
+    /// Goes through the file once. The tally covers the whole file and holds no fault; there is
+    /// none if the collector broke off.
     ///
     /// # Errors
     /// The first fault in the file; too few or too many entries.
-    pub fn pass<C: Collector>(&self, collector: &mut C) -> Result<Tally, Complaint> {
-        let mut text = self.source.text();
-        if Header::read(&mut text)? != *self.header {
-            return Err(changed());
-        }
+    pub fn pass<C: Collector>(&self, collector: &mut C) -> Result<Option<Tally>, Complaint> {
         let mut total = Tally { lines: self.header.lines, ..Tally::default() };
-        while let Some(batch) = text.batch()? {
-            let length = batch.len();
-            self.batch(batch, &mut total, collector)?;
-            text.consume(length);
+        let flow = self.text()?.each(|batch| self.batch(batch, &mut total, collector))?;
+        if flow.is_break() {
+            return Ok(None);
         }
         if total.entries < self.header.entries {
             return Err(Complaint::new(
@@ -52,7 +59,32 @@ impl Entries<'_> {
             )
             .at_line(total.lines));
         }
-        Ok(total)
+        Ok(Some(total))
+    }
+
+    /// The text after the header.
+    fn text(&self) -> Result<Text<'_>, Complaint> {
+        let mut text = self.source.text();
+        match Header::read(&mut text)? == *self.header {
+            true => Ok(text),
+            false => Err(changed()),
+        }
+    }
+
+    /// Counts the entries of each row by the row numbers alone: nothing else in a line is read,
+    /// nor is anything found wrong. `None` where that cannot be told so easily.
+    ///
+    /// # Errors
+    /// Those of the compressed stream.
+    pub fn count_rows(&self) -> Result<Option<RowCounts>, Complaint> {
+        let counts = RowCounts::new(self.header.rows);
+        let flow = self.text()?.each(|batch| {
+            let counted = pieces(batch)
+                .par_iter()
+                .all(|piece| rows::each(piece, self.header, RunCounter::new(&counts)).is_some());
+            Ok(if counted { ControlFlow::Continue(()) } else { ControlFlow::Break(()) })
+        })?;
+        Ok(flow.is_continue().then_some(counts))
     }
 
     fn batch<C: Collector>(
@@ -60,7 +92,7 @@ impl Entries<'_> {
         batch: &[u8],
         total: &mut Tally,
         collector: &mut C,
-    ) -> Result<(), Complaint> {
+    ) -> Result<ControlFlow<()>, Complaint> {
         let walk = Walk { header: self.header, leniency: self.leniency };
         let pieces = pieces(batch);
         let firsts = self.first_values(&pieces, total.entries, &walk);
@@ -75,10 +107,12 @@ impl Entries<'_> {
                 let tally = walk.piece(piece, first, limit, |line, i, j, value| {
                     shared.take(&mut kept, line, i, j, value);
                 });
+                shared.end(&mut kept);
                 (tally, kept)
             })
             .collect();
         let mut results = Vec::with_capacity(walked.len());
+        let not_single = total.not_single;
         for ((mut tally, kept), piece) in walked.into_iter().zip(pieces) {
             let left = self.header.entries - total.entries;
             if tally.entries > left {
@@ -92,7 +126,7 @@ impl Entries<'_> {
             results.push((total.lines, kept));
             total.add(&tally);
         }
-        collector.batch(results)
+        collector.batch(results, total.not_single == not_single)
     }
 
     /// Number of values before each piece; only an array's places depend on it.

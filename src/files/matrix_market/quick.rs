@@ -53,6 +53,14 @@ pub fn quick_value(bytes: &[u8]) -> Option<(f64, usize)> {
     quick_real(bytes)
 }
 
+/// A whole number with or without a minus.
+#[inline(always)]
+pub fn quick_signed(bytes: &[u8]) -> Option<(f64, usize)> {
+    let sign = usize::from(bytes.first() == Some(&b'-'));
+    let (value, length) = quick_count(&bytes[sign..])?;
+    Some((if sign == 1 { -value } else { value }, sign + length))
+}
+
 /// A whole number small enough for f64 to hold exactly.
 #[inline(always)]
 pub fn quick_count(bytes: &[u8]) -> Option<(f64, usize)> {

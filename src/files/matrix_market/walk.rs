@@ -9,7 +9,9 @@ use super::super::number::{Whole, real, whole};
 use super::super::source::first_line;
 use super::header::{Field, Header, Layout, Symmetry, too_long};
 use super::places::ArrayPlaces;
-use super::quick::{blanks, line_end, quick_count, quick_entry, quick_one, quick_value};
+use super::quick::{
+    blanks, line_end, quick_count, quick_entry, quick_one, quick_signed, quick_value,
+};
 use crate::base::Complaint;
 use crate::base::complaint::quote;
 
@@ -62,9 +64,8 @@ impl Walk<'_> {
             (Layout::Array, _) => self.array(piece, first, limit, sink),
             (_, Field::Pattern) => self.lines(piece, limit, quick_entry(quick_one), sink),
             (_, Field::Real) => self.lines(piece, limit, quick_entry(quick_value), sink),
-            (_, Field::Integer | Field::Unsigned) => {
-                self.lines(piece, limit, quick_entry(quick_count), sink)
-            }
+            (_, Field::Integer) => self.lines(piece, limit, quick_entry(quick_signed), sink),
+            (_, Field::Unsigned) => self.lines(piece, limit, quick_entry(quick_count), sink),
         }
     }
 
