@@ -173,10 +173,12 @@ mod tests {
 
     #[test]
     fn every_slice_is_multiplied_once_and_scattered_after_in_order() {
-        for groups in [vec![0..40], vec![0..15, 15..40], vec![0..5, 5..10, 10..40]] {
+        let bounds: [&[usize]; 3] = [&[0, 40], &[0, 15, 40], &[0, 5, 10, 40]];
+        for bounds in bounds {
+            let groups: Vec<Range<usize>> = bounds.windows(2).map(|b| b[0]..b[1]).collect();
             for (chunk, unit) in [(1, 1), (3, 2), (7, 7), (100, 4), (100, 100)] {
                 let mut multiplied = [false; 40];
-                let mut scattered = vec![[false; 40]; 3];
+                let mut scattered = [[false; 40]; 3];
                 let mut reached = vec![vec![None; 3]; groups.len()];
                 for work in order(&groups, chunk, unit) {
                     match work {
@@ -203,6 +205,7 @@ mod tests {
 
     #[test]
     fn a_thread_that_panics_ends_the_others() {
+        #[allow(clippy::single_range_in_vec_init)]
         let groups = [0..40];
         let cut = cut();
         let schedule = Schedule::new(&cut, &groups, 1, 1);

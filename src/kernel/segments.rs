@@ -60,8 +60,10 @@ pub unsafe fn dots<V: Value, const K: usize, const FUSED: bool>(
                 e += 1;
             }
             let t = t.add(usize::from(row) * stride);
-            for l in 0..K {
-                *t.add(l) += (parts[0][l] + parts[2][l]) + (parts[1][l] + parts[3][l]);
+            let sums: [f64; K] =
+                std::array::from_fn(|l| (parts[0][l] + parts[2][l]) + (parts[1][l] + parts[3][l]));
+            for (l, sum) in sums.iter().enumerate() {
+                *t.add(l) += sum;
             }
             columns = columns.add(length);
             values = values.add(length);

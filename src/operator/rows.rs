@@ -179,11 +179,12 @@ impl StoredRows {
     }
 
     fn entry(&self, entry: usize, base: usize) -> (usize, f64) {
-        each_storage!(self, tiles => {
+        fn of<V: Value>(tiles: &Tiles<V>, entry: usize) -> (usize, f64) {
             let parts = tiles.parts();
-            let place = base + usize::from(parts.columns[entry]);
-            (self.unknown_at(place), parts.values[entry].number())
-        })
+            (usize::from(parts.columns[entry]), parts.values[entry].number())
+        }
+        let (column, value) = each_storage!(self, tiles => of(tiles, entry));
+        (self.unknown_at(base + column), value)
     }
 
     /// Builds from compressed rows; for tests, small systems and sizes known to be right.
