@@ -25,9 +25,7 @@ use std::path::PathBuf;
 use std::process::ExitCode;
 use std::time::Instant;
 
-use ellbow::base::Grid;
 use ellbow::base::random::Stream;
-use ellbow::files::matrix::{self, ReadOptions};
 use ellbow::kernel::{Twin, Way};
 use ellbow::operator::{
     CompressedRows, Frame, Operator, Pass, Precision, RowWeights, StoredRows, Weighted,
@@ -38,6 +36,8 @@ use ellbow::solve::{Lane, Problem, Recurrence};
 use rayon::prelude::*;
 use serde_json::json;
 
+#[path = "systems/load.rs"]
+mod load;
 #[path = "systems/scenarios.rs"]
 mod scenarios;
 
@@ -49,10 +49,7 @@ pub struct Made {
 }
 
 struct Request {
-    system: Option<PathBuf>,
-    scenario: String,
-    scale: f64,
-    grid: Option<Vec<usize>>,
+    source: load::Source,
     precision: Precision,
     lanes: Vec<usize>,
     threads: Option<usize>,
@@ -75,11 +72,7 @@ fn main() -> ExitCode {
 
 fn parse() -> Result<Request, Box<dyn Error>> {
     let mut request = Request {
-        system: None,
-        scenario: "parallel-512".into(),
-        // A plain `cargo bench` takes seconds.
-        scale: 0.01,
-        grid: None,
+        source: load::Source::small(),
         precision: Precision::Double,
         lanes: vec![1, 2, 4, 8, 16],
         threads: None,
@@ -97,12 +90,11 @@ fn parse() -> Result<Request, Box<dyn Error>> {
             continue;
         }
         let value = arguments.next().ok_or_else(|| format!("{name} needs a value"))?;
+        if request.source.take(&name, &value)? {
+            continue;
+        }
         let numbers = || value.split(',').map(str::parse).collect::<Result<Vec<usize>, _>>();
         match name.as_str() {
-            "--system" => request.system = Some(value.into()),
-            "--scenario" => request.scenario = value,
-            "--scale" => request.scale = value.parse()?,
-            "--grid" => request.grid = Some(numbers()?),
             "--lanes" => request.lanes = numbers()?,
             "--threads" => request.threads = Some(value.parse()?),
             "--rounds" => request.rounds = value.parse()?,
@@ -124,41 +116,11 @@ fn run(request: &Request) -> Result<(), Box<dyn Error>> {
     if let Some(threads) = request.threads {
         rayon::ThreadPoolBuilder::new().num_threads(threads).build_global()?;
     }
-    let (rows, grid) = load(request)?;
+    let (rows, grid) = request.source.load(request.precision)?;
     let start = Instant::now();
     let stored = StoredRows::build(rows, grid.as_ref());
     let seconds = start.elapsed().as_secs_f64();
     if request.on_request { serve(request, &stored) } else { measure(request, stored, seconds) }
-}
-
-fn load(request: &Request) -> Result<(CompressedRows, Option<Grid>), Box<dyn Error>> {
-    let cells = request.grid.clone().or_else(|| scenario_grid(request));
-    let grid = cells.map(|cells| scenarios::grid(&cells));
-    let rows = match &request.system {
-        Some(path) => {
-            let options = ReadOptions { precision: request.precision, ..ReadOptions::default() };
-            matrix::read(path, &options)?.value
-        }
-        None => made(request)?.matrix,
-    };
-    Ok((rows, grid))
-}
-
-fn made(request: &Request) -> Result<Made, Box<dyn Error>> {
-    match request.scenario.as_str() {
-        "parallel-512" => Ok(scenarios::parallel(request.scale)),
-        "crosswell-3d" => Ok(scenarios::crosswell(request.scale)),
-        "hostile" => Ok(scenarios::hostile(request.scale)),
-        other => Err(format!("no scenario {other:?}").into()),
-    }
-}
-
-fn scenario_grid(request: &Request) -> Option<Vec<usize>> {
-    match (&request.system, request.scenario.as_str()) {
-        (None, "parallel-512") => Some(scenarios::parallel_sides(request.scale).to_vec()),
-        (None, "crosswell-3d") => Some(scenarios::crosswell_sides(request.scale).to_vec()),
-        _ => None,
-    }
 }
 
 /// Data that no model explains, so that a process goes on for as long as it is asked to.
