@@ -3,7 +3,8 @@
 
 mod cli_common;
 
-use cli_common::{Place, normals, number, sparse, word};
+use cli_common::{Place, ellbow, normals, number, sparse, word};
+use ellbow::kernel::Twin;
 use ndarray::Array2;
 
 /// A 30×20 system in a.mtx with data in b.npy.
@@ -181,6 +182,49 @@ fn settings_beyond_all_sense_are_refused() {
     for command in ["solve --strength 1", "inspect"] {
         let ran = place.expect(2, &format!("{command} job.toml"));
         assert!(ran.err.contains("list of data blocks is empty"), "{}", ran.err);
+    }
+    assert!(!place.path("never").exists());
+}
+
+#[test]
+fn an_instruction_set_that_the_environment_names_is_used_and_recorded_or_refused() {
+    let place = Place::new();
+    plain(&place);
+    let run = |value: &str, arguments: &str| {
+        let mut command = ellbow();
+        command.current_dir(place.path("")).env("ELLBOW_SIMD", value);
+        let output = command.args(arguments.split_whitespace()).output().unwrap();
+        (output.status.code().unwrap(), String::from_utf8(output.stderr).unwrap())
+    };
+    let solve = "solve --matrix a.mtx --data b.npy --strength 1 --out";
+    let (code, err) = run("portable", &format!("{solve} o"));
+    assert_eq!(code, 0, "{err}");
+    assert_eq!(word(&place.summary("o"), "/simd"), "portable");
+    let before = place.bytes("o/summary.json");
+    // Another set is no other run, and the record keeps saying what the files were made with.
+    let (code, err) = run("", &format!("{solve} o"));
+    assert!(code == 0 && err.contains("finished already"), "{err}");
+    assert!(place.bytes("o/summary.json") == before);
+    let available = Twin::ALL.into_iter().filter(|twin| twin.is_available());
+    let has: Vec<&str> = available.map(Twin::word).collect();
+    for twin in Twin::ALL {
+        let folder = format!("of-{}", twin.word());
+        let (code, err) = run(twin.word(), &format!("{solve} {folder}"));
+        if twin.is_available() {
+            assert_eq!(code, 0, "{err}");
+            assert_eq!(word(&place.summary(&folder), "/simd"), twin.word());
+        } else {
+            assert_eq!(code, 2, "{err}");
+            assert!(err.contains("this processor lacks it"), "{err}");
+        }
+    }
+    for arguments in [format!("{solve} never").as_str(), "demo --out never", "inspect absent.toml"]
+    {
+        let (code, err) = run("sse9", arguments);
+        assert_eq!(code, 2, "{err}");
+        for part in ["ELLBOW_SIMD", "sse9", &has.join(", "), "remedy: unset"] {
+            assert!(err.contains(part), "{part} in {err}");
+        }
     }
     assert!(!place.path("never").exists());
 }

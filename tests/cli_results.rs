@@ -6,6 +6,7 @@ mod cli_common;
 use cli_common::{
     Place, Ran, csv, distance, lsq, normals, number, plain_truth, product, row, sparse, truth, word,
 };
+use ellbow::kernel::Twin;
 use nalgebra::DMatrix;
 use ndarray::Array2;
 use serde_json::Value;
@@ -111,6 +112,9 @@ fn the_record_has_every_field_and_the_folder_every_file() {
             ("/ellbow_version", env!("CARGO_PKG_VERSION")),
             ("/method", "lsqr"),
             ("/penalty", "size"),
+            // What so small a system holds stays in the caches.
+            ("/pass", "one"),
+            ("/simd", Twin::current().word()),
             ("/stop/reason", "gradient"),
             ("/settings/command", command),
             ("/settings/duplicates", "sum"),

@@ -481,7 +481,7 @@ fn every_key_of_a_job_file_works_and_flags_win() {
          start = 'x.npy'\nrows = 'rows.csv'\ncolumns = 'columns.csv'\nmissing = 'nan'\n\
          linearised_at = 'x.npy'\npredicted = 'g.npy'\nduplicates = 'error'\nallow_nonfinite = false\n\
          precision = 'double'\nmethod = 'lsmr'\ncolumn_scaling = 'off'\nmax_iterations = 500\n\
-         gradient_tolerance = 1e-14\ntime_limit = '2m'\nout = 'result'\nthreads = 2\nseed = 7\n";
+         gradient_tolerance = 1e-14\ntime_limit = '2m'\nout = 'result'\npass = 'two-phase'\nthreads = 2\nseed = 7\n";
     place.write("job/solve.toml", format!("command = 'solve'\n{common}strength = 2\n{tables}"));
     place.expect(0, "solve job/solve.toml");
     let record = place.summary("job/result");
@@ -490,6 +490,7 @@ fn every_key_of_a_job_file_works_and_flags_win() {
     }
     for (pointer, value) in [
         ("/method", "lsmr"),
+        ("/pass", "two-phase"),
         ("/system/data_unit", "s"),
         ("/system/model_unit", "s/m"),
         ("/system/model_quantity", "slowness"),

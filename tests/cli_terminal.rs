@@ -28,12 +28,13 @@ fn help_of_every_command_fits_eighty_columns() {
         }
     }
     let ran = place.expect(0, "--help");
-    for code in ["65  bad input", "71", "74", "σ"] {
+    for code in ["65  bad input", "71", "74", "σ", "ELLBOW_SIMD"] {
         assert!(ran.out.contains(code), "{code} in {}", ran.out);
     }
     // A command shows its own options only.
     let solve = place.expect(0, "solve --help").out;
     let sweep = place.expect(0, "sweep --help").out;
+    assert!(solve.contains("--pass <auto|one|two-phase>"));
     assert!(solve.contains("--strength <") && !solve.contains("--strength-count"));
     assert!(sweep.contains("--strength-count") && !sweep.contains("--noise-factor"));
     assert_eq!(place.expect(0, "--version").out, format!("ellbow {}\n", env!("CARGO_PKG_VERSION")));

@@ -5,11 +5,6 @@ pub fn peak_bytes() -> Option<u64> {
     status_line("VmHWM:")
 }
 
-/// Anonymous memory resident now (mapped files not counted), in bytes.
-pub fn anonymous_bytes() -> Option<u64> {
-    status_line("RssAnon:")
-}
-
 /// Resident size now, in bytes.
 pub fn resident_bytes() -> Option<u64> {
     status_line("VmRSS:")

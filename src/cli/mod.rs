@@ -13,6 +13,7 @@ use clap::{CommandFactory, FromArgMatches, Parser, Subcommand};
 
 use crate::cli::terminal::{print, print_json, say};
 use crate::job::{JobError, Typed};
+use crate::kernel::Twin;
 use crate::{files, team};
 
 /// Exit codes, as the guide lists them.
@@ -26,7 +27,7 @@ mod exit {
     pub const FILE_ERROR: u8 = 74;
 }
 
-const EXIT_CODES: &str = "\
+const AFTER_HELP: &str = "\
 Exit codes:
    0  converged (a sweep: its chosen strength did)
    2  usage
@@ -34,7 +35,14 @@ Exit codes:
    4  broke down: a number stopped being finite
   65  bad input
   71  would not fit
-  74  a file could not be read or written";
+  74  a file could not be read or written
+
+Environment:
+  ELLBOW_SIMD  inner loops: portable, avx2 or avx512 [default: the most that the
+               processor has]
+  RAYON_NUM_THREADS, OMP_NUM_THREADS, SLURM_CPUS_PER_TASK
+               threads where --threads is not given; the first that is set
+  NO_COLOR     no colours";
 
 /// Turns indirect measurements into a model: solves the regularised sparse
 /// least-squares problem
@@ -44,7 +52,7 @@ Exit codes:
 /// at one strength λ or at many, marks where the trade-off bends, and keeps a
 /// record of everything.
 #[derive(Parser)]
-#[command(name = "ellbow", version, max_term_width = 80, after_help = EXIT_CODES)]
+#[command(name = "ellbow", version, max_term_width = 80, after_help = AFTER_HELP)]
 struct Arguments {
     #[command(subcommand)]
     command: Command,
@@ -127,12 +135,13 @@ pub fn main(arguments: impl IntoIterator<Item = OsString>) -> u8 {
             return if error.use_stderr() { exit::USAGE } else { exit::CONVERGED };
         }
     };
-    let result = refuse_several().and_then(|()| match arguments.command {
-        Command::Inspect(arguments) => inspect::run(arguments),
-        Command::Solve(arguments) => job::run(crate::job::Command::Solve, arguments),
-        Command::Sweep(arguments) => job::run(crate::job::Command::Sweep, arguments),
-        Command::Demo(arguments) => demo::run(&arguments),
-    });
+    let result =
+        refuse_several().and_then(|()| refuse_simd()).and_then(|()| match arguments.command {
+            Command::Inspect(arguments) => inspect::run(arguments),
+            Command::Solve(arguments) => job::run(crate::job::Command::Solve, arguments),
+            Command::Sweep(arguments) => job::run(crate::job::Command::Sweep, arguments),
+            Command::Demo(arguments) => demo::run(&arguments),
+        });
     result.unwrap_or_else(|error| {
         say(&format!("error: {error}"));
         exit_code(&error)
@@ -171,6 +180,11 @@ fn refuse_several() -> Result<(), JobError> {
             "start it once, without the parallel launcher; it uses the threads of one machine",
         ))),
     }
+}
+
+/// A name that the environment states and this processor cannot serve must not be passed over.
+fn refuse_simd() -> Result<(), JobError> {
+    Twin::chosen().map(|_| ()).map_err(JobError::Usage)
 }
 
 /// The settings of a job file, if one is named, with the options winning.

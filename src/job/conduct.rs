@@ -15,6 +15,7 @@ use crate::job::typed::{MethodName, RuleName, ScalingName};
 use crate::job::{JobError, advice, write};
 use crate::operator::{Operator, Weighted};
 use crate::report::record::Summary;
+use crate::solve::certificate;
 use crate::solve::direct::{self, Dense};
 use crate::solve::{Fault, Method, Solved, Stop, StopRules, Watch};
 use crate::sweep::{self, Condition, Request, Scaling, SetSweep, Strengths};
@@ -48,6 +49,8 @@ pub struct Run<'a> {
     /// Of the slowest track, added over groups that ran one after the other.
     pub iterations: u64,
     pub column_scaling: bool,
+    /// Of the widest group.
+    pub lanes: usize,
     pub bytes_per_pass: u64,
     pub workspace_bytes: u64,
     pub interrupted: bool,
@@ -163,6 +166,7 @@ impl<'a> Work<'a> {
             passes: 0,
             iterations: 0,
             column_scaling: false,
+            lanes: 0,
             bytes_per_pass: 0,
             workspace_bytes: 0,
             interrupted: false,
@@ -174,12 +178,13 @@ impl<'a> Work<'a> {
         let bare = Weighted::new(&self.system.matrix, &self.system.weights, None);
         if settings.method == MethodName::Direct {
             self.direct(&request, &mut run)?;
-            run.bytes_per_pass = bare.bytes_per_pass(run.strengths.len().min(32));
+            // Its passes are certificates only.
+            run.lanes = run.strengths.len().min(certificate::WIDTH_MAX);
         } else {
             self.iterate(&request, watch, &mut run);
-            run.bytes_per_pass = bare.bytes_per_pass(run.sets.len().min(sweep::LANES_MAX));
             self.exact_trace(&request, &mut run);
         }
+        run.bytes_per_pass = bare.bytes_per_pass(run.lanes);
         if let Some(complaint) = breakdown(self.system, &run.sets) {
             let broke = |s: &Solved| matches!(s.stop, Stop::NotFinite(_));
             if run.sets.iter().all(|set| set.solved.iter().all(broke)) {
@@ -251,6 +256,7 @@ impl<'a> Work<'a> {
         run.passes = sweep.passes;
         run.iterations = sweep.iterations;
         run.column_scaling = sweep.plan.scaled;
+        run.lanes = sweep.lanes_max;
         run.workspace_bytes = sweep.workspace_bytes;
         run.interrupted = sweep.interrupted.is_some();
     }

@@ -9,8 +9,9 @@ use crate::base::{Complaint, Warning, memory};
 use crate::files::vector::NonFinite;
 use crate::files::{self, matrix::ReadOptions};
 use crate::job::settings::{ReferenceSource, Source, UncertaintySource};
-use crate::job::typed::{Duplicates, GridTable, Missing, Precision};
+use crate::job::typed::{Duplicates, GridTable, Missing, PassName, Precision};
 use crate::job::{JobError, forecast};
+use crate::kernel::Way;
 use crate::operator;
 use crate::report::record::InputRecord;
 use crate::system::{BlockPart, Linearisation, Parts, Reference, System, Uncertainty};
@@ -77,7 +78,12 @@ pub fn load(source: &Source, strengths: usize) -> Result<Loaded, JobError> {
         grid,
         units: source.units.clone(),
     };
-    let (system, warnings) = System::assemble(parts)?;
+    let (mut system, warnings) = System::assemble(parts)?;
+    match source.pass {
+        PassName::Auto => {}
+        PassName::One => system.matrix.go(Way::OnePass),
+        PassName::TwoPhase => system.matrix.go(Way::TwoPhase),
+    }
     reader.warnings.extend(warnings);
     Ok(Loaded { system, start, warnings: reader.warnings })
 }

@@ -7,8 +7,8 @@ use serde::Serialize;
 use crate::base::Complaint;
 use crate::job::JobError;
 use crate::job::typed::{
-    Data, Duplicates, DurationText, GridTable, MethodName, Missing, NumberOrText, Precision,
-    RuleName, ScalingName, StrengthRange, Typed,
+    Data, Duplicates, DurationText, GridTable, MethodName, Missing, NumberOrText, PassName,
+    Precision, RuleName, ScalingName, StrengthRange, Typed,
 };
 use crate::solve::StopRules;
 
@@ -48,6 +48,9 @@ pub struct Source {
     pub(crate) precision: Precision,
     pub(crate) grid: Option<GridTable>,
     pub(crate) units: crate::system::Units,
+    /// Changes no result, so that it makes no other run.
+    #[serde(skip)]
+    pub(crate) pass: PassName,
 }
 
 /// One matrix with its data; rows of several are stacked in this order.
@@ -168,6 +171,7 @@ impl Source {
                 model_quantity: text(units.and_then(|u| u.model_quantity.as_ref())),
                 plausible: units.and_then(|u| u.plausible).map(|[low, high]| (low, high)),
             },
+            pass: typed.pass.unwrap_or(PassName::Auto),
         })
     }
 

@@ -9,8 +9,8 @@ use serde::Deserialize;
 use serde::de::{self, Deserializer, SeqAccess, Visitor};
 
 pub use crate::job::words::{
-    CommandName, Duplicates, DurationText, MethodName, Missing, Precision, RuleName, ScalingName,
-    StrengthRange,
+    CommandName, Duplicates, DurationText, MethodName, Missing, PassName, Precision, RuleName,
+    ScalingName, StrengthRange,
 };
 
 /// All settings, none of them resolved.
@@ -142,6 +142,11 @@ pub struct Typed {
     /// Folder for the results, made if absent [default: ellbow-result]
     #[arg(long, value_name = "DIR", help_heading = "Running")]
     pub out: Option<PathBuf>,
+
+    /// How a pass goes through the matrix: once, or products first and sums after;
+    /// results do not depend on it [default: auto, by counted memory traffic]
+    #[arg(long, value_name = "auto|one|two-phase", help_heading = "Running")]
+    pub pass: Option<PassName>,
 
     /// Threads; results do not depend on it [default: what the environment grants]
     #[arg(long, value_name = "N", help_heading = "Running")]
@@ -331,6 +336,7 @@ impl Typed {
             noise_factor,
             time_limit,
             out,
+            pass,
             threads,
             seed,
             force,

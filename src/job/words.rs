@@ -100,6 +100,18 @@ words!(
     }
 );
 
+words!(
+    /// How a pass goes through the stored matrix: [`crate::kernel::Way`]. Changes no bit.
+    PassName {
+        /// The way of less counted memory traffic.
+        Auto = "auto",
+        /// Products and sums of a few rows at a time.
+        One = "one",
+        /// Products of all rows, then all sums.
+        TwoPhase = "two-phase",
+    }
+);
+
 /// Defines a type read from text, with its own rule.
 macro_rules! from_text {
     ($name:ident) => {

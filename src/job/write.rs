@@ -10,6 +10,7 @@ use crate::files::Folder;
 use crate::job::JobError;
 use crate::job::conduct::{Run, chi_square};
 use crate::job::settings::Command;
+use crate::kernel::Twin;
 use crate::report::record::{
     BlockRecord, ConditionRecord, DirectRecord, InputRecord, ResultRecord, SCHEMA, Seconds,
     SetRecord, StopRecord, Summary, SweepRow, SystemRecord,
@@ -267,6 +268,8 @@ fn summary(run: &Run<'_>, inputs: Vec<InputRecord>, sweep: Vec<SweepRow>) -> Sum
             total: run.begun.elapsed().as_secs_f64(),
         },
         bytes_per_pass: run.bytes_per_pass,
+        pass: run.system.matrix.way(run.lanes).word().into(),
+        simd: Twin::current().word().into(),
         threads: run.threads.count,
         threads_from: run.threads.from.clone(),
         peak_bytes: crate::base::memory::peak_bytes(),

@@ -5,11 +5,14 @@
 //! products and sums apart and gives the same bits on every machine. `ELLBOW_SIMD` set to one of
 //! the names decides instead; a set that the processor lacks is refused.
 
+use std::ffi::OsStr;
 use std::sync::OnceLock;
 
 use super::segments;
 use super::tiles::Segments;
 use super::value::Value;
+use crate::base::Complaint;
+use crate::base::complaint::quote;
 
 /// An instruction set that the inner loops are compiled for.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -63,15 +66,34 @@ impl Twin {
     ///
     /// # Errors
     /// The variable holds no twin's name, or one that this processor cannot run.
-    pub fn chosen() -> Result<Self, String> {
-        let Some(asked) = std::env::var_os(VARIABLE).filter(|value| !value.is_empty()) else {
+    pub fn chosen() -> Result<Self, Complaint> {
+        Self::decide(std::env::var_os(VARIABLE).as_deref(), Self::is_available)
+    }
+
+    fn decide(asked: Option<&OsStr>, available: impl Fn(Self) -> bool) -> Result<Self, Complaint> {
+        let Some(asked) = asked.filter(|value| !value.is_empty()) else {
             return Ok(Self::best());
         };
-        let known = Self::ALL.into_iter().find(|twin| *twin.word() == *asked);
+        let known = Self::ALL.into_iter().find(|twin| asked == twin.word());
         match known {
-            Some(twin) if twin.is_available() => Ok(twin),
-            Some(twin) => Err(format!("this processor cannot run {}", twin.word())),
-            None => Err(format!("{asked:?} is none of portable, avx2, avx512")),
+            Some(twin) if available(twin) => Ok(twin),
+            _ => {
+                let value = quote(asked.as_encoded_bytes());
+                let fault = if known.is_some() {
+                    "this processor lacks it"
+                } else {
+                    "no such set is known"
+                };
+                let has = Self::ALL.into_iter().filter(|twin| available(*twin));
+                let has: Vec<&str> = has.map(Self::word).collect();
+                Err(Complaint::new(
+                    format!("the environment says {VARIABLE}=\"{value}\", but {fault}"),
+                    format!(
+                        "unset {VARIABLE}, or set it to what this processor has: {}",
+                        has.join(", ")
+                    ),
+                ))
+            }
         }
     }
 
@@ -205,5 +227,30 @@ mod avx512 {
     ) {
         // SAFETY: the caller's promise is the same.
         unsafe { segments::scatter::<V, K, true>(all, stride, p, s) }
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn a_set_that_the_processor_lacks_is_refused_with_what_it_has() {
+        let of = |text: &str| {
+            Twin::decide(Some(OsStr::new(text)), |twin| twin != Twin::Avx512)
+                .map_err(|complaint| complaint.to_string())
+        };
+        assert_eq!(of("portable"), Ok(Twin::Portable));
+        assert_eq!(of("avx2"), Ok(Twin::Avx2));
+        assert_eq!(of(""), Ok(Twin::best()));
+        let lacking = of("avx512").unwrap_err();
+        assert!(
+            lacking.contains("ELLBOW_SIMD=\"avx512\", but this processor lacks it"),
+            "{lacking}"
+        );
+        assert!(lacking.ends_with("what this processor has: portable, avx2"), "{lacking}");
+        let unknown = of("AVX2\u{1b}").unwrap_err();
+        assert!(unknown.contains("no such set is known"), "{unknown}");
+        assert!(!unknown.contains('\u{1b}'), "{unknown}");
     }
 }

@@ -11,8 +11,6 @@
 
 use sprs::CsMatI;
 
-use crate::kernel::Value;
-
 /// How values are kept when the matrix is not a pattern.
 #[derive(Debug, Clone, Copy, PartialEq, Eq, Default)]
 pub enum Precision {
@@ -62,7 +60,7 @@ enum RowValues<'a> {
 
 impl<'a> Row<'a> {
     /// The entry at `place` of `columns`, as f64. Panics if there is none.
-    pub fn value(&self, place: usize) -> f64 {
+    fn value(&self, place: usize) -> f64 {
         match self.values {
             RowValues::Double(values) => values[place],
             RowValues::Single(values) => f64::from(values[place]),
@@ -90,16 +88,6 @@ impl CompressedRows {
     /// Stored entries, explicit zeros included.
     pub fn entries(&self) -> usize {
         each_compressed!(self, a => a.nnz())
-    }
-
-    /// Bytes of the stored arrays.
-    pub fn bytes(&self) -> u64 {
-        let values = match self {
-            Self::Double(_) => f64::BYTES,
-            Self::Single(_) => f32::BYTES,
-            Self::Pattern(_) => <()>::BYTES,
-        };
-        (4 + values) * self.entries() as u64 + 8 * (self.rows() as u64 + 1)
     }
 
     /// Word for the way values are kept: `f64`, `f32` or `pattern`.

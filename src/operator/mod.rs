@@ -20,6 +20,7 @@ pub mod weighted;
 pub mod weights;
 
 pub use compressed::{CompressedRows, Precision};
+pub use order::OrderedBy;
 pub use rows::{Row, StoredRows};
 pub use settle::Duplicates;
 pub use stack::Stacked;

@@ -24,9 +24,25 @@ const WIDER_COST: [f64; 5] = [0.0, 0.1, 0.2, 0.35, 0.6];
 /// Rows whose segments are counted.
 const SAMPLE_ROWS: usize = 4096;
 
+/// By what the unknowns are ordered in the stored matrix.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, serde::Serialize)]
+#[serde(rename_all = "lowercase")]
+pub enum OrderedBy {
+    /// As in the file.
+    File,
+    /// Along a space-filling curve through the grid.
+    Curve,
+    /// Those in most rows first.
+    Count,
+    /// As the rows first touch them.
+    Touch,
+}
+
 /// Inner order of unknowns.
 #[derive(Debug, Clone, PartialEq)]
 pub struct ColumnOrder {
+    /// What made it.
+    pub by: OrderedBy,
     /// Inner place of each unknown.
     pub place_of: Vec<u32>,
     /// Unknown at each inner place.
@@ -35,12 +51,12 @@ pub struct ColumnOrder {
 
 impl ColumnOrder {
     /// From the unknowns in inner order.
-    fn new(unknown_at: Vec<u32>) -> Self {
+    fn new(by: OrderedBy, unknown_at: Vec<u32>) -> Self {
         let mut place_of = vec![0; unknown_at.len()];
         for (place, &unknown) in (0u32..).zip(&unknown_at) {
             place_of[unknown as usize] = place;
         }
-        Self { place_of, unknown_at }
+        Self { by, place_of, unknown_at }
     }
 }
 
@@ -62,16 +78,16 @@ pub fn columns(matrix: &CompressedRows, grid: Option<&Grid>) -> Columns {
     let sample = sample(matrix);
     let natural = (None, widths(matrix, &sample, None));
     let mut candidates = vec![natural];
-    let mut add = |unknown_at: Vec<u32>| {
-        let order = ColumnOrder::new(unknown_at);
+    let mut add = |by: OrderedBy, unknown_at: Vec<u32>| {
+        let order = ColumnOrder::new(by, unknown_at);
         let costs = widths(matrix, &sample, Some(&order.place_of));
         candidates.push((Some(order), costs));
     };
     match grid {
-        Some(grid) if grid.unknowns() == n => add(along_curve(grid)),
+        Some(grid) if grid.unknowns() == n => add(OrderedBy::Curve, along_curve(grid)),
         _ => {
-            add(by_count(matrix));
-            add(by_touch(matrix));
+            add(OrderedBy::Count, by_count(matrix));
+            add(OrderedBy::Touch, by_touch(matrix));
         }
     }
     let mut best = (f64::INFINITY, 0, 0);

@@ -16,7 +16,7 @@
 use crate::base::Grid;
 use crate::kernel::{Tiles, Value, Way};
 use crate::operator::compressed::CompressedRows;
-use crate::operator::order::ColumnOrder;
+use crate::operator::order::{ColumnOrder, OrderedBy};
 use crate::operator::tile;
 use crate::operator::traffic::Ways;
 
@@ -130,6 +130,16 @@ impl StoredRows {
             AnyTiles::Single(_) => "f32",
             AnyTiles::Pattern(_) => "pattern",
         }
+    }
+
+    /// By what the unknowns are ordered inside.
+    pub fn unknowns_by(&self) -> OrderedBy {
+        self.order.columns.as_ref().map_or(OrderedBy::File, |order| order.by)
+    }
+
+    /// Whether the rows are stored in another order than in the file.
+    pub fn rows_are_reordered(&self) -> bool {
+        self.order.row_at.is_some()
     }
 
     /// How a pass with so many lanes goes through the matrix: the way of fewer counted bytes,

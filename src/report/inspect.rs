@@ -6,7 +6,9 @@ use crate::base::complaint::escape;
 use crate::report::page::wrap;
 use crate::system::facts::Spread;
 use crate::system::findings::{Evidence, Finding, Severity, number};
-use crate::system::inspection::{Extremes, FitSummary, Forecast, Inspection, Named, SetSummary};
+use crate::system::inspection::{
+    Extremes, FitSummary, Forecast, Inspection, Named, OrderedBy, SetSummary, Shape,
+};
 
 /// Width of the label before each value.
 const LABEL: usize = 25;
@@ -89,7 +91,7 @@ fn shape(out: &mut String, inspection: &Inspection) {
     if shape.nonfinite_entries > 0 {
         line(out, "  of these not finite", &count(shape.nonfinite_entries));
     }
-    line(out, "matrix in memory", &format!("{}, {}", bytes(shape.matrix_bytes), shape.storage));
+    storage(out, shape);
     if let Some(grid) = &shape.grid {
         let axes: Vec<String> = grid
             .axes
@@ -120,6 +122,36 @@ fn shape(out: &mut String, inspection: &Inspection) {
             line(out, &format!("  {}", escape(&block.name)), &rows);
         }
     }
+}
+
+/// How the matrix is held, each fact on a line of its own.
+fn storage(out: &mut String, shape: &Shape) {
+    let each = match shape.entries {
+        0 => String::new(),
+        entries => {
+            format!(", {} bytes an entry", number(shape.matrix_bytes as f64 / entries as f64))
+        }
+    };
+    line(
+        out,
+        "matrix in memory",
+        &format!("{}, {}{each}", bytes(shape.matrix_bytes), shape.storage),
+    );
+    let tiles = if shape.columns <= shape.tile_unknowns {
+        "all unknowns in one tile".into()
+    } else {
+        format!("in tiles of {} unknowns", count(shape.tile_unknowns))
+    };
+    line(out, "  stored", &tiles);
+    let unknowns = match shape.unknowns_by {
+        OrderedBy::File => "as in the file",
+        OrderedBy::Curve => "along a curve through the grid",
+        OrderedBy::Count => "those in most rows first",
+        OrderedBy::Touch => "as the rows first touch them",
+    };
+    line(out, "  order of unknowns", unknowns);
+    let rows = if shape.rows_reordered { "by the tiles they touch" } else { "as in the file" };
+    line(out, "  order of rows", rows);
 }
 
 fn coverage(out: &mut String, inspection: &Inspection) {

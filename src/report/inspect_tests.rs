@@ -25,7 +25,10 @@ fn inspection() -> Inspection {
             explicit_zeros: 3,
             nonfinite_entries: 0,
             storage: "f64",
-            matrix_bytes: 1_195_060,
+            matrix_bytes: 997_526,
+            tile_unknowns: 4096,
+            unknowns_by: OrderedBy::File,
+            rows_reordered: true,
             blocks: vec![
                 BlockSpan { name: "upper".into(), first_row: 0, rows: 1000, weight: 1.0 },
                 BlockSpan { name: "low\u{1b}er".into(), first_row: 1000, rows: 234, weight: 0.5 },
@@ -107,6 +110,9 @@ fn numbers_stand_with_their_units_and_names_are_escaped() {
     for expected in [
         "  rows (data)               1,234\n",
         "98,765, 3.335 % of all places",
+        "997.5 kB, f64, 10.1 bytes an entry\n",
+        "all unknowns in one tile\n",
+        "  order of rows           by the tiles they touch\n",
         "x 40 × 0.5 m, z 60 × 0.5 m; x runs fastest;",
         "rows 1,001 to 1,234, weight 0.5",
         "low\\u{1b}er",
@@ -122,6 +128,15 @@ fn numbers_stand_with_their_units_and_names_are_escaped() {
     ] {
         assert!(page.contains(expected), "{expected}\n{page}");
     }
+}
+
+#[test]
+fn an_order_of_its_own_is_stated_in_plain_words() {
+    let mut large = inspection();
+    (large.shape.columns, large.shape.unknowns_by) = (8400, OrderedBy::Curve);
+    let page = page(&large);
+    assert!(page.contains("in tiles of 4,096 unknowns\n"), "{page}");
+    assert!(page.contains("along a curve through the grid\n"), "{page}");
 }
 
 #[test]

@@ -40,8 +40,14 @@ pub struct Summary {
     pub direct: Option<DirectRecord>,
     /// Wall clock.
     pub seconds: Seconds,
-    /// What a pass with a lane for each data set (at most 16) moves, counted from the sizes.
+    /// What a pass moves, counted from the sizes, with as many lanes as the widest group of lanes.
     pub bytes_per_pass: u64,
+    /// `one` or `two-phase`: how such a pass went through the matrix; no number depends on it.
+    #[serde(default)]
+    pub pass: String,
+    /// `portable`, `avx2` or `avx512`: the inner loops. `portable` differs from the others in last bits.
+    #[serde(default)]
+    pub simd: String,
     /// Threads that took part; no number depends on it.
     pub threads: usize,
     /// `--threads`, the name of an environment variable, or `affinity`.
@@ -83,7 +89,7 @@ pub struct SystemRecord {
     pub entries: usize,
     /// `f64`, `f32` or `pattern`.
     pub storage: String,
-    /// Memory of the stored arrays.
+    /// Memory of the arrays that a pass reads.
     pub matrix_bytes: u64,
     /// k, columns of the data.
     pub data_sets: usize,

@@ -26,7 +26,7 @@ pub struct Facts {
     pub nonfinite_entries: usize,
     /// `f64`, `f32` or `pattern`.
     pub storage: &'static str,
-    /// Memory of the stored arrays.
+    /// Memory of the arrays that a pass reads.
     pub matrix_bytes: u64,
     /// Row by row.
     pub row: RowFacts,

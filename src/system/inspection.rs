@@ -6,6 +6,7 @@ use super::findings::{Finding, PLACES_MAX, QuickFit};
 use super::spread::middle;
 use super::{BlockSpan, System, Units};
 use crate::base::Grid;
+pub use crate::operator::OrderedBy;
 
 /// The record of an inspection.
 #[derive(Debug, Clone, PartialEq, serde::Serialize)]
@@ -51,8 +52,14 @@ pub struct Shape {
     pub nonfinite_entries: usize,
     /// `f64`, `f32` or `pattern`.
     pub storage: &'static str,
-    /// Memory of the stored arrays.
+    /// Memory of the arrays that a pass reads.
     pub matrix_bytes: u64,
+    /// Unknowns of a tile of the stored matrix.
+    pub tile_unknowns: usize,
+    /// By what the unknowns are ordered in it.
+    pub unknowns_by: OrderedBy,
+    /// Whether its rows are in another order than in the file.
+    pub rows_reordered: bool,
     /// At most [`BLOCKS_MAX`]; `blocks_total` counts all.
     pub blocks: Vec<BlockSpan>,
     /// Blocks that are stacked, listed or not.
@@ -230,6 +237,9 @@ fn shape(system: &System, facts: &Facts) -> Shape {
         nonfinite_entries: facts.nonfinite_entries,
         storage: facts.storage,
         matrix_bytes: facts.matrix_bytes,
+        tile_unknowns: system.matrix.cut().tile,
+        unknowns_by: system.matrix.unknowns_by(),
+        rows_reordered: system.matrix.rows_are_reordered(),
         blocks: system.blocks.iter().take(BLOCKS_MAX).cloned().collect(),
         blocks_total: system.blocks.len(),
         grid: system.grid.as_ref().map(grid_summary),
