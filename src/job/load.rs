@@ -85,7 +85,18 @@ pub fn load(source: &Source, strengths: usize) -> Result<Loaded, JobError> {
         PassName::TwoPhase => system.matrix.go(Way::TwoPhase),
     }
     reader.warnings.extend(warnings);
+    let start = start.map(|values| hold(values, system.columns.fixed.as_deref()));
     Ok(Loaded { system, start, warnings: reader.warnings })
+}
+
+/// A held unknown never moves, so it starts where it is held whatever the start model says.
+fn hold(mut start: Array2<f64>, fixed: Option<&[f64]>) -> Array2<f64> {
+    for (mut values, held) in start.rows_mut().into_iter().zip(fixed.unwrap_or_default()) {
+        if !held.is_nan() {
+            values.fill(*held);
+        }
+    }
+    start
 }
 
 /// Length and checksum of every file the system is read from.
