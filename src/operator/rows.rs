@@ -14,7 +14,7 @@
 //! blocks of a pass ([`StoredRows::place_of`]).
 
 use crate::base::Grid;
-use crate::kernel::{Tiles, Value, Way};
+use crate::kernel::{RowOrder, Tiles, Value, Way};
 use crate::operator::compressed::CompressedRows;
 use crate::operator::order::ColumnOrder;
 use crate::operator::tile;
@@ -40,10 +40,7 @@ pub(crate) enum AnyTiles {
 #[derive(Debug, Clone, PartialEq, Default)]
 pub(crate) struct Orders {
     pub columns: Option<ColumnOrder>,
-    /// File row of each inner row.
-    pub row_at: Option<Vec<u32>>,
-    /// Inner row of each file row.
-    pub inner_of: Option<Vec<u32>>,
+    pub rows: Option<RowOrder>,
 }
 
 /// The same expression for each way of keeping values.
@@ -119,7 +116,7 @@ impl StoredRows {
                 + 4 * parts.rows.len() as u64
                 + 16 * parts.table.len() as u64
         }
-        let orders = self.order.row_at.as_ref().map_or(0, |rows| 4 * rows.len() as u64);
+        let orders = self.order.rows.as_ref().map_or(0, |_| 4 * self.rows() as u64);
         each_storage!(self, tiles => of(tiles)) + orders
     }
 
@@ -146,7 +143,7 @@ impl StoredRows {
     /// Row `i`, borrowed. Panics if `i` ≥ m.
     pub fn row(&self, i: usize) -> Row<'_> {
         assert!(i < self.rows(), "row {i} of {}", self.rows());
-        let inner = self.order.inner_of.as_ref().map_or(i, |inner| inner[i] as usize);
+        let inner = self.order.rows.as_ref().map_or(i, |rows| rows.inner_of()[i] as usize);
         Row { matrix: self, inner }
     }
 
