@@ -5,7 +5,8 @@ use std::alloc::{GlobalAlloc, Layout, System};
 use std::cell::Cell;
 
 use ellbow::base::random::Stream;
-use ellbow::operator::{RowWeights, StoredRows, Weighted};
+use ellbow::kernel::{Twin, Way};
+use ellbow::operator::{Frame, Operator, Pass, RowWeights, StoredRows, Weighted};
 use ellbow::solve::certificate::Frobenius;
 use ellbow::solve::cgls::Cgls;
 use ellbow::solve::fan::Fan;
@@ -184,4 +185,48 @@ fn a_scouting_fan_allocates_nothing_in_its_steps_either() {
         (0..20).for_each(|_| assert_eq!(fan.step(), Stepped::Iteration));
         assert_eq!(CALLS.get() - before, 0);
     });
+}
+
+/// Neither way allocates, on one thread or on two, with any of the inner loops: enough products for
+/// a pass to be shared, enough entries for groups with sums of their own.
+#[test]
+fn a_pass_allocates_nothing_on_any_of_its_threads() {
+    const LANES: usize = 8;
+    let (m, n) = (3000, 40);
+    let stream = Stream::new(37, 0);
+    let dense: Vec<f64> = (0..m * n).map(|i| stream.normal(i)).collect();
+    let mut matrix = StoredRows::from_dense(m as usize, n as usize, &dense);
+    let scales: Vec<f64> = (0..n).map(|j| 1.0 + j as f64).collect();
+    let [v, u] = [n, m].map(|rows| vec![1.0; rows as usize * LANES]);
+    for (threads, way) in
+        [1, 2].into_iter().flat_map(|t| [Way::OnePass, Way::TwoPhase].map(|w| (t, w)))
+    {
+        matrix.go(way);
+        let pool = rayon::ThreadPoolBuilder::new().num_threads(threads).build().unwrap();
+        for twin in Twin::ALL.into_iter().filter(|twin| twin.is_available()) {
+            let operator = Weighted::new(&matrix, &RowWeights::Ones, Some(&scales)).with_twin(twin);
+            let (mut u, mut s, mut scratch) = (u.clone(), v.clone(), operator.scratch(LANES));
+            let mut passes = |count: usize| {
+                (0..count).for_each(|_| {
+                    operator.pass(Pass {
+                        frame: Frame::Step,
+                        sets: &[0; LANES],
+                        strengths: &[0.0; LANES],
+                        v: &v,
+                        alpha: &[0.5; LANES],
+                        u: &mut u,
+                        s: &mut s,
+                        squares: &mut [0.0; LANES],
+                        scratch: &mut scratch,
+                    });
+                });
+            };
+            // A thread that first looks for work of another's makes room for that, once.
+            pool.install(|| passes(20));
+            let before = pool.broadcast(|_| CALLS.get());
+            pool.install(|| passes(20));
+            let after = pool.broadcast(|_| CALLS.get());
+            assert_eq!(before, after, "{threads} threads, {way:?}, {twin:?}");
+        }
+    }
 }

@@ -20,6 +20,7 @@
 pub mod block;
 pub mod pass;
 pub mod plain;
+pub mod row_order;
 mod schedule;
 mod segments;
 pub mod tiles;
@@ -28,6 +29,7 @@ pub mod value;
 
 pub use block::Block;
 pub use pass::{Factors, Lanes, Room, Way, pass};
+pub use row_order::RowOrder;
 pub use tiles::Tiles;
 pub use twins::Twin;
 pub use value::Value;

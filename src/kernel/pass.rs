@@ -11,6 +11,7 @@ use std::sync::atomic::{AtomicBool, AtomicUsize, Ordering};
 use rayon::prelude::*;
 
 use super::block::Block;
+use super::row_order::RowOrder;
 use super::schedule::{Schedule, Unit};
 use super::tiles::{Cut, Tiles};
 use super::twins::{Twin, loops, widths};
@@ -37,8 +38,9 @@ impl Way {
     }
 }
 
-/// Products below which a pass stays on the calling thread: handing out work costs more.
-const ALONE_MAX: usize = 1 << 16;
+/// Products below which a pass stays on the calling thread: handing out work costs more. An
+/// interpreter that looks for data races sees threads at sizes that it can bear.
+const ALONE_MAX: usize = if cfg!(miri) { 1 << 8 } else { 1 << 16 };
 
 /// Rows of a dot unit at most in two phases: with more, the rows' products leave the cache.
 const UNIT_ROWS: usize = 1 << 14;
@@ -121,8 +123,8 @@ impl Room {
 pub struct Plan<'a> {
     /// Slices of each group with a partial s of its own; together all slices, in order.
     pub groups: &'a [Range<usize>],
-    /// File row of each inner row; `None` if it is the same.
-    pub row_at: Option<&'a [u32]>,
+    /// Which file row each inner row is; `None` if it is the same.
+    pub rows: Option<&'a RowOrder>,
     /// Changes no bit.
     pub way: Way,
     /// Whose inner loops.
@@ -131,8 +133,8 @@ pub struct Plan<'a> {
 
 /// One traversal. `factors(row, lane)` gives f, h, g of a file row.
 ///
-/// Panics if a block is not of its documented shape, if groups are not the slices in order, or if
-/// the rows of the plan are no permutation's length.
+/// Panics if a block is not of its documented shape, if groups are not the slices in order, if the
+/// plan orders another number of rows, or if the processor cannot run the twin.
 pub fn pass<V: Value>(
     tiles: &Tiles<V>,
     plan: &Plan<'_>,
@@ -143,12 +145,13 @@ pub fn pass<V: Value>(
     let cut = tiles.cut();
     assert!(v.len() == cut.columns * k && s.len() == cut.columns * k, "v and s are n×k");
     assert!(u.len() == cut.rows * k && alpha.len() == k && squares.len() == k, "u is m×k");
-    assert!(plan.row_at.is_none_or(|rows| rows.len() == cut.rows), "one row per row");
+    assert!(plan.rows.is_none_or(|rows| rows.row_at().len() == cut.rows), "one row per row");
     check_groups(cut, plan.groups);
     let [push, partial, slice_squares, counters] = Room::sizes(cut, plan.groups.len(), k);
-    if k == 0 || cut.rows == 0 || cut.columns == 0 {
-        // Without a column there is no tile, and without a row no slice.
-        return bare(plan, factors, Bare { k, alpha, u, s, squares });
+    if k == 0 || cut.rows == 0 {
+        // Without a slice there is no round, so nothing would begin the sums.
+        s.fill(0.0);
+        return squares.fill(0.0);
     }
     let alone = tiles.entries().saturating_mul(k) < ALONE_MAX;
     let threads = if alone { 1 } else { rayon::current_num_threads() };
@@ -178,32 +181,6 @@ pub fn pass<V: Value>(
     }
     for (l, square) in squares.iter_mut().enumerate() {
         *square = sum_pairwise(&room.squares[..slice_squares], k, l, 0, cut.slices());
-    }
-}
-
-/// The blocks of a pass over a matrix without rows or columns.
-struct Bare<'a> {
-    k: usize,
-    alpha: &'a [f64],
-    u: &'a mut [f64],
-    s: &'a mut [f64],
-    squares: &'a mut [f64],
-}
-
-fn bare(plan: &Plan<'_>, factors: &impl Fn(usize, usize) -> Factors, blocks: Bare<'_>) {
-    let Bare { k, alpha, u, s, squares } = blocks;
-    s.fill(0.0);
-    squares.fill(0.0);
-    if k == 0 {
-        return;
-    }
-    for inner in 0..u.len() / k {
-        let row = plan.row_at.map_or(inner, |rows| rows[inner] as usize);
-        for l in 0..k {
-            let new = -alpha[l] * u[row * k + l];
-            u[row * k + l] = new;
-            squares[l] += (factors(row, l).square * new).powi(2);
-        }
     }
 }
 
@@ -385,7 +362,7 @@ impl<V: Value, F: Fn(usize, usize) -> Factors + Sync> Task<'_, V, F> {
         let k = self.k;
         let rows = self.tiles.cut().rows_of(slice);
         // SAFETY: the slice belongs to one dot unit; its squares, its rows of the push, and the
-        // rows of u that they stand for (`row_at` is one to one) are nobody else's meanwhile.
+        // rows of u that they stand for (a `RowOrder` is one to one) are nobody else's meanwhile.
         let (push, squares) = unsafe {
             (
                 self.push.part(rows.start * k..rows.end * k),
@@ -394,7 +371,7 @@ impl<V: Value, F: Fn(usize, usize) -> Factors + Sync> Task<'_, V, F> {
         };
         squares.fill(0.0);
         for (inner, push) in rows.zip(push.chunks_exact_mut(k)) {
-            let row = self.plan.row_at.map_or(inner, |rows| rows[inner] as usize);
+            let row = self.plan.rows.map_or(inner, |rows| rows.row_at()[inner] as usize);
             // SAFETY: as above.
             let u = unsafe { self.u.part(row * k..(row + 1) * k) };
             for l in 0..k {

@@ -5,6 +5,7 @@
 use std::ops::Range;
 
 use super::pass::{Factors, sum_pairwise};
+use super::row_order::RowOrder;
 use super::segments::PARTS;
 use super::tiles::Tiles;
 use super::value::Value;
@@ -31,7 +32,7 @@ pub struct Blocks<'a> {
 pub fn pass<V: Value>(
     tiles: &Tiles<V>,
     groups: &[Range<usize>],
-    row_at: Option<&[u32]>,
+    rows: Option<&RowOrder>,
     factors: &impl Fn(usize, usize) -> Factors,
     blocks: Blocks<'_>,
 ) {
@@ -44,7 +45,7 @@ pub fn pass<V: Value>(
             let mut partial = vec![0.0; cut.columns];
             for slice in group.clone() {
                 for inner in cut.rows_of(slice) {
-                    let row = row_at.map_or(inner, |rows| rows[inner] as usize);
+                    let row = rows.map_or(inner, |rows| rows.row_at()[inner] as usize);
                     let f = factors(row, l);
                     let dot = dot(tiles, slice, inner, |j| v[j * k + l]);
                     let new = f.dot * dot - alpha[l] * u[row * k + l];

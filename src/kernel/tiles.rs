@@ -124,7 +124,8 @@ impl<V: Value> Tiles<V> {
     pub fn new(cut: Cut, parts: Parts<V>) -> Result<Self, &'static str> {
         check_cut(&cut)?;
         let table = &parts.table;
-        if table.len() != cut.slices() * cut.tiles() + 1 {
+        let starts = cut.slices().checked_mul(cut.tiles()).and_then(|s| s.checked_add(1));
+        if starts != Some(table.len()) {
             return Err("the table has not one start per slice and tile, and an end");
         }
         if table[0] != Start::default() {

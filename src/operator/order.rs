@@ -6,6 +6,7 @@
 use rayon::prelude::*;
 
 use crate::base::Grid;
+use crate::kernel::RowOrder;
 use crate::kernel::tiles::TILE_MAX;
 use crate::operator::compressed::CompressedRows;
 
@@ -188,9 +189,9 @@ fn by_touch(matrix: &CompressedRows) -> Vec<u32> {
     order
 }
 
-/// File row of each inner row, or `None` if it is the same: rows that begin and end in the same
+/// The order of rows, or `None` if it is the file's: rows that begin and end in the same
 /// tiles lie together, so that a tile in the cache serves many rows.
-pub fn rows(matrix: &CompressedRows, place_of: Option<&[u32]>, tile: usize) -> Option<Vec<u32>> {
+pub fn rows(matrix: &CompressedRows, place_of: Option<&[u32]>, tile: usize) -> Option<RowOrder> {
     let shift = tile.trailing_zeros();
     let tile_of = |j: u32| place_of.map_or(j, |p| p[j as usize]) >> shift;
     let mut keys: Vec<(u64, u32)> = (0..matrix.rows())
@@ -212,5 +213,6 @@ pub fn rows(matrix: &CompressedRows, place_of: Option<&[u32]>, tile: usize) -> O
     }
     // Rows of the same tiles stay in file order: the number of the row is part of the key.
     keys.par_sort_unstable();
-    Some(keys.into_iter().map(|(_, row)| row).collect())
+    let row_at = keys.into_iter().map(|(_, row)| row).collect();
+    Some(RowOrder::new(row_at).expect("every row has one key"))
 }

@@ -13,7 +13,7 @@ use super::rows::{AnyTiles, Orders, StoredRows};
 use crate::base::Grid;
 use crate::kernel::block::zeros;
 use crate::kernel::tiles::{BAND_MAX, Cut, Parts, Start};
-use crate::kernel::{Tiles, Value, Way};
+use crate::kernel::{RowOrder, Tiles, Value, Way};
 use crate::operator::keep::Keep;
 use crate::operator::traffic::Ways;
 
@@ -36,28 +36,22 @@ const ENTRIES_PER_START: usize = 64;
 pub fn build(matrix: CompressedRows, grid: Option<&Grid>) -> StoredRows {
     let Columns { order: columns, tile } = order::columns(&matrix, grid);
     let place_of = columns.as_ref().map(|order| order.place_of.as_slice());
-    let row_at = order::rows(&matrix, place_of, tile);
+    let rows = order::rows(&matrix, place_of, tile);
+    let row_at = rows.as_ref().map(RowOrder::row_at);
     let cut = cut(matrix.rows(), matrix.columns(), matrix.entries(), tile);
     let tiles = match &matrix {
         CompressedRows::Double(a) => {
-            AnyTiles::Double(fill(&matrix, a.data(), &cut, place_of, row_at.as_deref()))
+            AnyTiles::Double(fill(&matrix, a.data(), &cut, place_of, row_at))
         }
         CompressedRows::Single(a) => {
-            AnyTiles::Single(fill(&matrix, a.data(), &cut, place_of, row_at.as_deref()))
+            AnyTiles::Single(fill(&matrix, a.data(), &cut, place_of, row_at))
         }
         CompressedRows::Pattern(a) => {
-            AnyTiles::Pattern(fill(&matrix, a.data(), &cut, place_of, row_at.as_deref()))
+            AnyTiles::Pattern(fill(&matrix, a.data(), &cut, place_of, row_at))
         }
     };
-    let inner_of = row_at.as_ref().map(|rows| {
-        let mut inner_of = vec![0; rows.len()];
-        for (inner, &row) in (0u32..).zip(rows) {
-            inner_of[row as usize] = inner;
-        }
-        inner_of
-    });
     drop(matrix);
-    let order = Orders { columns, row_at, inner_of };
+    let order = Orders { columns, rows };
     let mut stored = StoredRows { tiles, order, ways: Ways::both(Way::TwoPhase) };
     stored.ways = Ways::counted(&stored);
     stored

@@ -149,7 +149,7 @@ impl Operator for Weighted<'_> {
         let lanes = kernel::Lanes { count: k, v, alpha, u, s: &mut *s, squares, room };
         let plan = kernel::pass::Plan {
             groups: &self.groups,
-            row_at: self.matrix.order.row_at.as_deref(),
+            rows: self.matrix.order.rows.as_ref(),
             way: self.matrix.way(k),
             twin: self.twin,
         };
