@@ -138,7 +138,7 @@ impl StoredRows {
 
     /// Whether the rows are stored in another order than in the file.
     pub fn rows_are_reordered(&self) -> bool {
-        self.order.row_at.is_some()
+        self.order.rows.is_some()
     }
 
     /// How a pass with so many lanes goes through the matrix: the way of fewer counted bytes,
