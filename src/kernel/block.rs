@@ -33,6 +33,11 @@ impl Block {
         if length == 0 { 0 } else { 8 * (length + LINE - 1) as u64 }
     }
 
+    /// Bytes that the block holds, however many of its numbers are still in use.
+    pub fn allocated(&self) -> u64 {
+        8 * self.data.capacity() as u64
+    }
+
     /// Keeps the first `length` numbers.
     pub fn truncate(&mut self, length: usize) {
         self.length = self.length.min(length);
@@ -65,13 +70,17 @@ pub fn zeros<T: Copy + Default>(length: usize) -> Vec<T> {
 #[cfg(all(target_os = "linux", not(miri)))]
 #[allow(unsafe_code)]
 pub fn ask_for_large_pages<T>(values: &[T]) {
-    const PAGE: usize = 4096;
     let bytes = std::mem::size_of_val(values);
     if bytes < HUGE_MIN {
         return;
     }
-    let start = (values.as_ptr() as usize).next_multiple_of(PAGE);
-    let end = (values.as_ptr() as usize + bytes) / PAGE * PAGE;
+    // SAFETY: asks for a number; no memory is touched.
+    let page = usize::try_from(unsafe { libc::sysconf(libc::_SC_PAGESIZE) }).unwrap_or(0);
+    if page == 0 {
+        return;
+    }
+    let start = (values.as_ptr() as usize).next_multiple_of(page);
+    let end = (values.as_ptr() as usize + bytes) / page * page;
     // SAFETY: the range lies inside memory that `values` borrows, and this advice changes neither
     // what it holds nor who may use it. A refusal is of no consequence.
     unsafe {

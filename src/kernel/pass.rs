@@ -43,7 +43,7 @@ impl Way {
 const ALONE_MAX: usize = if cfg!(miri) { 1 << 8 } else { 1 << 16 };
 
 /// Rows of a dot unit at most in two phases: with more, the rows' products leave the cache.
-const UNIT_ROWS: usize = 1 << 14;
+pub(crate) const UNIT_ROWS: usize = 1 << 14;
 
 /// Dot units for each thread at least, so that none is left waiting for the last.
 const UNITS_PER_THREAD: usize = 8;
@@ -237,7 +237,7 @@ fn add_groups(partial: &[f64], s: &mut [f64]) {
 }
 
 /// Sum of lane `l` over `count` slices, added pairwise.
-pub(super) fn sum_pairwise(squares: &[f64], k: usize, l: usize, from: usize, count: usize) -> f64 {
+pub(crate) fn sum_pairwise(squares: &[f64], k: usize, l: usize, from: usize, count: usize) -> f64 {
     match count {
         0 => 0.0,
         1 => squares[from * k + l],

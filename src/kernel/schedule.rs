@@ -81,7 +81,7 @@ impl<'a> Schedule<'a> {
         let (dots_done, tiles_done) = counters.split_at(self.rounds);
         let (dots, scatters) = (self.dot_units(), self.scatter_units());
         let each = dots + scatters;
-        let guard = Guard(abandoned);
+        let mut guard = Guard { abandoned, finished: false };
         loop {
             let number = next.fetch_add(1, Ordering::Relaxed);
             if number >= self.rounds * each {
@@ -116,7 +116,7 @@ impl<'a> Schedule<'a> {
                 tiles_done[place].store(round + 1, Ordering::Release);
             }
         }
-        drop(guard);
+        guard.finished = true;
     }
 }
 
@@ -141,12 +141,15 @@ fn wait(ready: impl Fn() -> bool, abandoned: &AtomicBool) -> bool {
 }
 
 /// Tells the others when its thread panics: they would wait for its unit for ever.
-struct Guard<'a>(&'a AtomicBool);
+struct Guard<'a> {
+    abandoned: &'a AtomicBool,
+    finished: bool,
+}
 
 impl Drop for Guard<'_> {
     fn drop(&mut self) {
-        if std::thread::panicking() {
-            self.0.store(true, Ordering::Relaxed);
+        if !self.finished {
+            self.abandoned.store(true, Ordering::Relaxed);
         }
     }
 }

@@ -18,9 +18,10 @@ pub fn multiply_add<const FUSED: bool>(a: f64, b: f64, c: f64) -> f64 {
 /// t ← t + A v over segments, for lanes `0..K` of rows `stride` numbers apart.
 ///
 /// # Safety
-/// Columns of the segments must be below the rows of the block at `v`, their rows below those of
-/// the block at `t`, where a block's row r is K readable (of `t`: writable) numbers at
-/// `r * stride`; columns and values must be as many as the lengths, each plus one, add up to.
+/// For every column c that occurs, `c * stride .. + K` from `v` must be readable, and for every row
+/// r that occurs, `r * stride .. + K` from `t` must lie in one allocation with `t` and be writable by
+/// the caller alone; nothing is asked of other rows. Columns and values must be as many as the
+/// lengths, each plus one, add up to.
 #[inline(always)]
 #[allow(unsafe_code)]
 pub unsafe fn dots<V: Value, const K: usize, const FUSED: bool>(
@@ -35,8 +36,8 @@ pub unsafe fn dots<V: Value, const K: usize, const FUSED: bool>(
         let mut parts = [[0.0f64; K]; PARTS];
         let whole = length / PARTS * PARTS;
         let mut e = 0;
-        // SAFETY: e + part < length, so column and value exist, and the column is below the rows
-        // of the block at v; the row is below those of the block at t.
+        // SAFETY: e + part < length, so column and value exist; rows and columns that occur are
+        // the caller's promise.
         unsafe {
             while e < whole {
                 for (part, sums) in parts.iter_mut().enumerate() {
@@ -86,7 +87,7 @@ pub unsafe fn scatter<V: Value, const K: usize, const FUSED: bool>(
     let (mut columns, mut values) = (segments.columns.as_ptr(), segments.values.as_ptr());
     for (&row, &less) in segments.rows.iter().zip(segments.lengths) {
         let length = usize::from(less) + 1;
-        // SAFETY: the row is below the rows of the block at p; every column below those at s.
+        // SAFETY: rows and columns that occur are the caller's promise.
         unsafe {
             let p = p.add(usize::from(row) * stride);
             let push: [f64; K] = std::array::from_fn(|l| *p.add(l));

@@ -1,4 +1,4 @@
-//! Builds stored rows from entries in any order without ever holding them all a second time.
+//! Builds compressed rows from entries in any order without ever holding them all a second time.
 //!
 //! 1. [`RowCounts`]: a first run over the entries counts them per row (any number of threads).
 //! 2. [`Scatter`]: a second run puts each entry at its place in the final arrays. Entries come in

@@ -11,6 +11,7 @@ pub(crate) mod build;
 pub mod compressed;
 pub(crate) mod keep;
 pub(crate) mod order;
+pub mod row_visit;
 pub mod rows;
 pub(crate) mod settle;
 pub mod stack;
@@ -68,6 +69,7 @@ pub struct Pass<'a> {
 pub struct Scratch {
     pub(crate) scaled: Block,
     pub(crate) room: Room,
+    pub(crate) penalty_squares: Vec<f64>,
 }
 
 /// What a solver multiplies with: one [`Pass`] is Ã and Ãᵀ in a single traversal.

@@ -7,7 +7,7 @@ use rayon::prelude::*;
 
 use crate::base::Grid;
 use crate::kernel::RowOrder;
-use crate::kernel::tiles::TILE_MAX;
+use crate::kernel::tiles::{BAND_MAX, TILE_MAX};
 use crate::operator::compressed::CompressedRows;
 
 /// Narrowest tile: 4096 unknowns are 32 KiB a lane, and 256 KiB for eight lanes, which second
@@ -20,7 +20,7 @@ const SEGMENT_COST: f64 = 12.0;
 
 /// What an entry costs more in a tile of 2, 4, 8, 16 times [`TILE_MIN`], in entries: such tiles
 /// leave the first, then the second level of caches.
-const WIDER_COST: [f64; 5] = [0.0, 0.1, 0.2, 0.35, 0.6];
+const WIDER_COST: [f64; 5] = [0.0, 0.1, 0.25, 0.5, 0.8];
 
 /// Rows whose segments are counted.
 const SAMPLE_ROWS: usize = 4096;
@@ -70,15 +70,17 @@ pub struct Columns {
 }
 
 /// The order and width of least counted cost. Candidates: as they come; along a space-filling
-/// curve where the grid is known; else by how many entries the columns have, and by where the rows first touch them.
+/// curve where the grid is known; else by how many entries the columns have, and by where the
+/// rows first touch them.
 pub fn columns(matrix: &CompressedRows, grid: Option<&Grid>) -> Columns {
     let n = matrix.columns();
     if n <= TILE_MIN {
         return Columns { order: None, tile: TILE_MIN };
     }
     let sample = sample(matrix);
-    let natural = (None, widths(matrix, &sample, None));
-    let mut candidates = vec![natural];
+    let natural = widths(matrix, &sample, None);
+    let least = natural.iter().copied().fold(f64::INFINITY, f64::min);
+    let mut candidates = vec![(None, natural)];
     let mut add = |by: OrderedBy, unknown_at: Vec<u32>| {
         let order = ColumnOrder::new(by, unknown_at);
         let costs = widths(matrix, &sample, Some(&order.place_of));
@@ -86,6 +88,8 @@ pub fn columns(matrix: &CompressedRows, grid: Option<&Grid>) -> Columns {
     };
     match grid {
         Some(grid) if grid.unknowns() == n => add(OrderedBy::Curve, along_curve(grid)),
+        // One segment a row is the least there is: nothing to gain from another order.
+        _ if least <= 1.05 * (1.0 + SEGMENT_COST * filled(matrix, &sample)) => {}
         _ => {
             add(OrderedBy::Count, by_count(matrix));
             add(OrderedBy::Touch, by_touch(matrix));
@@ -108,6 +112,12 @@ pub fn columns(matrix: &CompressedRows, grid: Option<&Grid>) -> Columns {
 fn sample(matrix: &CompressedRows) -> Vec<usize> {
     let stride = matrix.rows().div_ceil(SAMPLE_ROWS).max(1);
     (0..matrix.rows()).step_by(stride).collect()
+}
+
+/// Rows of the sample that have entries, for each of their entries.
+fn filled(matrix: &CompressedRows, sample: &[usize]) -> f64 {
+    let lengths = || sample.iter().map(|&i| matrix.row(i).columns.len());
+    lengths().filter(|&length| length > 0).count() as f64 / lengths().sum::<usize>().max(1) as f64
 }
 
 /// Cost per entry at each width, from the segments of a sample of rows.
@@ -134,8 +144,12 @@ fn widths(matrix: &CompressedRows, sample: &[usize], place_of: Option<&[u32]>) -
         .collect();
     let sum = |place: usize| counted.iter().map(|counts| counts[place]).sum::<usize>() as f64;
     let entries = sum(5).max(1.0);
+    let slices = matrix.rows().div_ceil(BAND_MAX) as f64;
     std::array::from_fn(|doublings| {
-        1.0 + WIDER_COST[doublings] + SEGMENT_COST * sum(doublings) / entries
+        // Where the largest slices still have hardly an entry in a tile, the table weighs too.
+        let starts = slices * matrix.columns().div_ceil(TILE_MIN << doublings) as f64;
+        let table = starts / matrix.entries().max(1) as f64;
+        1.0 + WIDER_COST[doublings] + SEGMENT_COST * (sum(doublings) / entries + table)
     })
 }
 
@@ -170,7 +184,7 @@ fn by_count(matrix: &CompressedRows) -> Vec<u32> {
         counts[j as usize] = counts[j as usize].saturating_add(1);
     }
     let mut order: Vec<u32> = (0..matrix.columns() as u32).collect();
-    order.sort_by_key(|&j| std::cmp::Reverse(counts[j as usize]));
+    order.par_sort_by_key(|&j| std::cmp::Reverse(counts[j as usize]));
     order
 }
 
@@ -192,6 +206,9 @@ fn by_touch(matrix: &CompressedRows) -> Vec<u32> {
 /// The order of rows, or `None` if it is the file's: rows that begin and end in the same
 /// tiles lie together, so that a tile in the cache serves many rows.
 pub fn rows(matrix: &CompressedRows, place_of: Option<&[u32]>, tile: usize) -> Option<RowOrder> {
+    if matrix.columns() <= tile {
+        return None;
+    }
     let shift = tile.trailing_zeros();
     let tile_of = |j: u32| place_of.map_or(j, |p| p[j as usize]) >> shift;
     let mut keys: Vec<(u64, u32)> = (0..matrix.rows())

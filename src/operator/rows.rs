@@ -44,8 +44,6 @@ pub(crate) struct Orders {
 }
 
 /// The same expression for each way of keeping values.
-#[macro_export]
-#[doc(hidden)]
 macro_rules! each_storage {
     ($stored:expr, $tiles:ident => $body:expr) => {
         match &$stored.tiles {
@@ -55,6 +53,7 @@ macro_rules! each_storage {
         }
     };
 }
+pub(crate) use each_storage;
 
 /// One row's entries.
 #[derive(Clone, Copy)]
@@ -122,6 +121,27 @@ impl StoredRows {
         each_storage!(self, tiles => of(tiles)) + orders
     }
 
+    /// Entries of all slices before each slice.
+    pub(super) fn entries_before_slices(&self) -> Vec<usize> {
+        let cut = self.cut();
+        let of = |slice: usize| -> usize {
+            each_storage!(self, tiles => {
+                let count = |tile| {
+                    let (from, to) = tiles.bounds(slice..slice + 1, tile);
+                    to.entry - from.entry
+                };
+                (0..cut.tiles()).map(count).sum()
+            })
+        };
+        let mut before = 0;
+        (0..cut.slices())
+            .map(|slice| {
+                let after = before + of(slice);
+                std::mem::replace(&mut before, after)
+            })
+            .collect()
+    }
+
     /// Word for the way values are kept: `f64`, `f32` or `pattern`.
     pub fn storage_name(&self) -> &'static str {
         match self.tiles {
@@ -155,8 +175,17 @@ impl StoredRows {
     /// Row `i`, borrowed. Panics if `i` ≥ m.
     pub fn row(&self, i: usize) -> Row<'_> {
         assert!(i < self.rows(), "row {i} of {}", self.rows());
-        let inner = self.order.rows.as_ref().map_or(i, |rows| rows.inner_of()[i] as usize);
-        Row { matrix: self, inner }
+        Row { matrix: self, inner: self.inner_of(i) }
+    }
+
+    /// Inner row of a file row.
+    pub(super) fn inner_of(&self, row: usize) -> usize {
+        self.order.rows.as_ref().map_or(row, |rows| rows.inner_of()[row] as usize)
+    }
+
+    /// File row of an inner row.
+    pub(super) fn row_at(&self, inner: usize) -> usize {
+        self.order.rows.as_ref().map_or(inner, |rows| rows.row_at()[inner] as usize)
     }
 
     /// Where unknown `j` stands in the blocks v and s of a pass. Panics if `j` ≥ n.

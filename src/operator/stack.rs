@@ -2,7 +2,14 @@
 //!
 //! Used where a start model or a column scaling rules out carrying λ as a shift.
 
+use rayon::prelude::*;
+
+use crate::base::sums::{PARALLEL_MIN, PIECE};
+use crate::kernel::pass::sum_pairwise;
 use crate::operator::{Frame, Operator, Pass, Scratch, Weighted};
+
+/// Penalty rows of a piece of work.
+const ROWS: usize = PIECE / 4;
 
 /// [W A; λ P] D over a borrowed W A D: u has m + n rows,
 /// the last n in inner order. A pass costs one of W A D and 40 bytes an
@@ -48,26 +55,48 @@ impl Operator for Stacked<'_> {
             u: data_rows,
             s: &mut *s,
             squares: &mut *squares,
-            scratch,
+            scratch: &mut *scratch,
         });
-        for (j, u) in penalty_rows.chunks_mut(k).enumerate() {
-            let scale = self.top.scale_at(j);
-            let p = self.penalty.as_ref().map_or(1.0, |p| p[j]);
-            let forward = if frame == Frame::Step { scale * p } else { p };
-            for l in 0..k {
-                u[l] = strengths[l] * forward * v[j * k + l] - alpha[l] * u[l];
-                s[j * k + l] += strengths[l] * p * scale * u[l];
-                squares[l] += u[l] * u[l];
+        if k == 0 || self.columns() == 0 {
+            return;
+        }
+        let pieces = self.columns().div_ceil(ROWS);
+        let sums = &mut scratch.penalty_squares[..pieces * k];
+        let piece = |place: usize, u: &mut [f64], s: &mut [f64], sums: &mut [f64]| {
+            sums.fill(0.0);
+            let rows = u.chunks_exact_mut(k).zip(s.chunks_exact_mut(k));
+            for (j, (u, s)) in (place * ROWS..).zip(rows) {
+                let scale = self.top.scale_at(j);
+                let p = self.penalty.as_ref().map_or(1.0, |p| p[j]);
+                let forward = if frame == Frame::Step { scale * p } else { p };
+                for l in 0..k {
+                    u[l] = strengths[l] * forward * v[j * k + l] - alpha[l] * u[l];
+                    s[l] += strengths[l] * p * scale * u[l];
+                    sums[l] += u[l] * u[l];
+                }
             }
+        };
+        if penalty_rows.len() < PARALLEL_MIN {
+            let blocks = penalty_rows.chunks_mut(ROWS * k).zip(s.chunks_mut(ROWS * k));
+            let blocks = blocks.zip(sums.chunks_mut(k)).enumerate();
+            blocks.for_each(|(place, ((u, s), sums))| piece(place, u, s, sums));
+        } else {
+            let blocks = penalty_rows.par_chunks_mut(ROWS * k).zip(s.par_chunks_mut(ROWS * k));
+            let blocks = blocks.zip(sums.par_chunks_mut(k)).enumerate();
+            blocks.for_each(|(place, ((u, s), sums))| piece(place, u, s, sums));
+        }
+        for (l, square) in squares.iter_mut().enumerate() {
+            *square += sum_pairwise(&scratch.penalty_squares, k, l, 0, pieces);
         }
     }
 
     fn scratch(&self, lanes: usize) -> Scratch {
-        self.top.scratch(lanes)
+        let penalty_squares = vec![0.0; self.columns().div_ceil(ROWS) * lanes];
+        Scratch { penalty_squares, ..self.top.scratch(lanes) }
     }
 
     fn scratch_bytes(&self, lanes: usize) -> u64 {
-        self.top.scratch_bytes(lanes)
+        self.top.scratch_bytes(lanes) + 8 * (self.columns().div_ceil(ROWS) * lanes) as u64
     }
 
     fn bytes_per_pass(&self, lanes: usize) -> u64 {

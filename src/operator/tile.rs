@@ -61,7 +61,9 @@ pub fn build(matrix: CompressedRows, grid: Option<&Grid>) -> StoredRows {
 fn cut(rows: usize, columns: usize, entries: usize, tile: usize) -> Cut {
     let below = |limit: usize| 1usize << limit.max(1).ilog2();
     let per_row = entries.div_ceil(rows.max(1)).max(1);
-    let band_rows = rows.div_ceil(BANDS).clamp(ROWS_MIN, BAND_ROWS);
+    // Few long rows are cut finer than few short ones: what counts is the work of a band.
+    let least = (SLICE_ENTRIES / per_row).clamp(1, ROWS_MIN);
+    let band_rows = rows.div_ceil(BANDS).clamp(least, BAND_ROWS);
     let mut slice = below(SLICE_ENTRIES / per_row).min(below(band_rows));
     let tiles = columns.div_ceil(tile);
     while slice < BAND_MAX && rows.div_ceil(slice) * tiles * ENTRIES_PER_START > entries {

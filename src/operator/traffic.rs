@@ -4,15 +4,15 @@
 //! at a time; in two phases it comes twice, while v serves thousands of rows before it is needed
 //! again and s stays with its tile. What a slice or a unit touches is counted on a sample.
 
+use rayon::prelude::*;
+
 use super::rows::StoredRows;
-use crate::each_storage;
+use crate::kernel::pass::UNIT_ROWS;
 use crate::kernel::{Tiles, Way};
+use crate::operator::rows::each_storage;
 
 /// Slices, and groups of slices as large as a two-phase unit, that are looked at.
 const SAMPLES: usize = 16;
-
-/// Rows of a two-phase unit.
-const UNIT_ROWS: usize = 1 << 14;
 
 /// v and s of this many bytes stay in a core's own caches beside the matrix.
 const CACHED: usize = 256 << 10;
@@ -88,19 +88,18 @@ fn touched(matrix: &StoredRows, count: usize) -> Touched {
     let cut = matrix.cut();
     let starts = cut.slices().div_ceil(count);
     let stride = starts.div_ceil(SAMPLES).max(1);
-    let mut sum = Touched { columns: 0.0, lines: 0.0 };
-    let mut samples = 0.0;
-    for start in (0..starts).step_by(stride) {
-        let slices = start * count..((start + 1) * count).min(cut.slices());
-        let (columns, lines) = each_storage!(matrix, tiles => different(tiles, slices));
-        sum.columns += columns as f64;
-        sum.lines += lines as f64;
-        samples += 1.0;
-    }
-    Touched {
-        columns: sum.columns / f64::max(samples, 1.0),
-        lines: sum.lines / f64::max(samples, 1.0),
-    }
+    let counted: Vec<(usize, usize)> = (0..starts.div_ceil(stride))
+        .into_par_iter()
+        .map(|sample| {
+            let start = sample * stride;
+            let slices = start * count..((start + 1) * count).min(cut.slices());
+            each_storage!(matrix, tiles => different(tiles, slices))
+        })
+        .collect();
+    let mean = |of: fn(&(usize, usize)) -> usize| {
+        counted.iter().map(of).sum::<usize>() as f64 / counted.len().max(1) as f64
+    };
+    Touched { columns: mean(|counts| counts.0), lines: mean(|counts| counts.1) }
 }
 
 fn different<V: crate::kernel::Value>(

@@ -5,8 +5,8 @@ use std::ops::Range;
 use rayon::prelude::*;
 
 use crate::base::sums::{PARALLEL_MIN, PIECE};
-use crate::each_storage;
 use crate::kernel::{self, Block, Factors, Room, Twin, Way};
+use crate::operator::rows::each_storage;
 use crate::operator::{Frame, Operator, Pass, RowWeights, Scratch, StoredRows};
 
 /// Units that the scatter of a pass is to have: tiles times groups.
@@ -63,14 +63,7 @@ impl<'a> Weighted<'a> {
     /// Σᵢ wᵢ² aᵢⱼ² for every column j of the unscaled matrix, with the weights of data set `set`.
     /// One visit of the rows (not a pass: nothing is multiplied with).
     pub fn column_squares(&self, set: usize) -> Vec<f64> {
-        let mut squares = vec![0.0; self.matrix.columns()];
-        for i in 0..self.matrix.rows() {
-            let w = self.weights.at(i, set);
-            for (j, a) in self.matrix.row(i).entries() {
-                squares[j] += (w * a) * (w * a);
-            }
-        }
-        squares
+        self.matrix.column_squares(|i| self.weights.at(i, set))
     }
 
     /// D of the unknown at a place of v and s.
@@ -81,6 +74,9 @@ impl<'a> Weighted<'a> {
 
 /// out ← D v, or out ← D out where there is no v.
 fn scale(d: &[f64], k: usize, v: Option<&[f64]>, out: &mut [f64]) {
+    if k == 0 {
+        return;
+    }
     let rows = PIECE / 4;
     let piece = |(place, out): (usize, &mut [f64])| {
         let from = place * rows;
@@ -108,8 +104,13 @@ fn groups(matrix: &StoredRows) -> Vec<Range<usize>> {
     let (cut, entries) = (matrix.cut(), matrix.entries());
     let worth = entries / (ENTRIES_PER_COLUMN_MIN * cut.columns.max(1));
     let wanted = UNITS.div_ceil(cut.tiles().max(1)).min(worth).clamp(1, cut.slices().max(1));
-    // Slices have equal rows; those of rays have about equal entries too.
-    let bound = |group: usize| cut.slices() * group / wanted;
+    let before = matrix.entries_before_slices();
+    let bound = |group: usize| match group {
+        group if group == wanted => cut.slices(),
+        group => {
+            before.partition_point(|&entries_before| entries_before < entries / wanted * group)
+        }
+    };
     (0..wanted).map(|group| bound(group)..bound(group + 1)).collect()
 }
 
@@ -128,7 +129,7 @@ impl Operator for Weighted<'_> {
         let n_k = self.columns() * k;
         assert!(v.len() == n_k && s.len() == n_k, "v and s are n×k");
         assert!(u.len() == self.rows() * k, "u is m×k");
-        let Scratch { scaled, room } = scratch;
+        let Scratch { scaled, room, .. } = scratch;
         let v = match &self.inner_scales {
             Some(d) if frame == Frame::Step => {
                 let scaled = &mut scaled[..n_k];
@@ -164,6 +165,7 @@ impl Operator for Weighted<'_> {
         Scratch {
             scaled: Block::zeros(scaled),
             room: Room::new(self.matrix.cut(), self.groups.len(), lanes),
+            penalty_squares: Vec::new(),
         }
     }
 

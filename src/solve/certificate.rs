@@ -137,8 +137,9 @@ pub fn certify(
         .into_iter()
         .enumerate()
         .map(|(l, candidate)| {
-            let residual: Vec<f64> = u.chunks(k).map(|row| row[l]).collect();
-            let pulled: Vec<f64> = (0..n).map(|j| s[matrix.place_of(j) * k + l]).collect();
+            let residual: Vec<f64> = u.par_chunks(k).map(|row| row[l]).collect();
+            let pulled: Vec<f64> =
+                (0..n).into_par_iter().map(|j| s[matrix.place_of(j) * k + l]).collect();
             finish(problem, frobenius, candidate, residual, &pulled, squares[l].sqrt())
         })
         .collect()

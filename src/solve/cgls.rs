@@ -371,8 +371,8 @@ impl Recurrence for Cgls<'_> {
 
     fn workspace_bytes(&self) -> u64 {
         let blocks = [&self.right, &self.u, &self.p, &self.t, &self.g, &self.x, &self.y];
-        blocks.iter().map(|block| Block::bytes(block.len())).sum::<u64>()
-            + 8 * self.sums.len() as u64
+        blocks.iter().map(|block| block.allocated()).sum::<u64>()
+            + 8 * self.sums.capacity() as u64
             + self.operator.scratch_bytes(self.lanes.len())
     }
 }

@@ -99,13 +99,13 @@ impl<'a> GolubKahan<'a> {
     }
 
     pub fn bytes(&self) -> u64 {
-        let k = self.sets.len();
+        // The scratch was made for all lanes and stays.
+        let k = self.lanes.len();
         let scalars =
             |lane: &LaneState| lane.process.alphas.capacity() + lane.process.betas.capacity();
         let kept: usize = self.lanes.iter().map(scalars).sum();
-        let blocks: u64 =
-            [&self.u, &self.v, &self.s].map(|block| Block::bytes(block.len())).iter().sum();
-        blocks + 8 * (self.sums.len() + kept) as u64 + self.operator.scratch_bytes(k)
+        let blocks: u64 = [&self.u, &self.v, &self.s].map(Block::allocated).iter().sum();
+        blocks + 8 * (self.sums.capacity() + kept) as u64 + self.operator.scratch_bytes(k)
     }
 
     pub fn width(&self) -> usize {

@@ -1,7 +1,6 @@
 //! Puts a system together from the parts read from files, checking each against the others.
 
 use ndarray::{Array2, s};
-use rayon::prelude::*;
 
 use super::lengths::{check, of_block};
 use super::names::row_name;
@@ -281,13 +280,10 @@ fn linearise(
         return refuse("predicted datum of row", i, point.predicted[i], &point.predicted_path);
     }
     // Rows are independent, so the bits do not depend on who sums which.
-    let shift: Vec<f64> = (0..matrix.rows())
-        .into_par_iter()
-        .map(|i| {
-            let product: f64 = matrix.row(i).entries().map(|(j, a)| a * point.model[j]).sum();
-            point.predicted[i] - product
-        })
-        .collect();
+    let shift = matrix.map_rows(|i, entries| {
+        let product: f64 = entries.iter().map(|&(j, a)| a * point.model[j as usize]).sum();
+        point.predicted[i] - product
+    });
     for ((i, set), datum) in data.indexed_iter_mut() {
         if !absent.is_some_and(|gone| gone[[i, set]]) {
             *datum -= shift[i];

@@ -3,12 +3,12 @@
 use std::path::Path;
 
 use ndarray::Array2;
-use rayon::prelude::*;
 
 use super::lengths::differs;
 use super::{ColumnTable, Reference, SystemError};
 use crate::base::sums::dot;
 use crate::base::{Complaint, complaint::show};
+use crate::operator::row_visit::Entry;
 use crate::operator::{RowWeights, StoredRows};
 
 /// What a constant is fitted to.
@@ -42,9 +42,10 @@ impl RowSums {
     pub fn of(matrix: &StoredRows, columns: &ColumnTable) -> Self {
         let held = columns.fixed.as_ref().filter(|values| values.iter().any(|v| !v.is_nan()));
         let takes = columns.taking_constant();
-        let sum = |i: usize| {
+        let sum = |_: usize, entries: &[Entry]| {
             let (mut free, mut fixed) = (0.0, 0.0);
-            for (j, a) in matrix.row(i).entries() {
+            for &(j, a) in entries {
+                let j = j as usize;
                 match held.map(|values| values[j]).filter(|value| !value.is_nan()) {
                     None if takes(j) => free += a,
                     None => {}
@@ -53,8 +54,7 @@ impl RowSums {
             }
             (free, fixed)
         };
-        let (free, fixed): (Vec<f64>, Vec<f64>) =
-            (0..matrix.rows()).into_par_iter().map(sum).unzip();
+        let (free, fixed): (Vec<f64>, Vec<f64>) = matrix.map_rows(sum).into_iter().unzip();
         Self { free, fixed: held.map(|_| fixed) }
     }
 

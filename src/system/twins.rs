@@ -1,6 +1,9 @@
 //! Rows and columns that occur more than once: candidates by hash, then compared exactly.
 
+use std::sync::atomic::{AtomicBool, Ordering};
+
 use ndarray::Array2;
+use rayon::prelude::*;
 
 use crate::operator::StoredRows;
 
@@ -82,26 +85,30 @@ pub(super) fn duplicate_columns(
     for (class, members) in classes.iter().enumerate() {
         members.iter().for_each(|&j| class_of[j] = class as u32);
     }
-    let mut equal = vec![true; classes.len()];
-    let mut found: Vec<(u32, u64)> = Vec::new();
-    for i in 0..matrix.rows() {
-        found.clear();
-        for (j, a) in matrix.row(i).entries() {
-            if a != 0.0 && class_of[j] != NO_CLASS {
-                found.push((class_of[j], a.to_bits()));
+    let equal: Vec<AtomicBool> = classes.iter().map(|_| AtomicBool::new(true)).collect();
+    (0..matrix.cut().slices()).into_par_iter().for_each_init(Vec::new, |found, slice| {
+        matrix.each_row(slice..slice + 1, |_, entries| {
+            found.clear();
+            for &(j, a) in entries {
+                let class = class_of[j as usize];
+                if a != 0.0 && class != NO_CLASS {
+                    found.push((class, a.to_bits()));
+                }
             }
-        }
-        found.sort_unstable();
-        for run in found.chunk_by(|a, b| a.0 == b.0) {
-            let class = run[0].0 as usize;
-            equal[class] &=
-                run.len() == classes[class].len() && run.iter().all(|entry| entry.1 == run[0].1);
-        }
-    }
+            found.sort_unstable();
+            for run in found.chunk_by(|a, b| a.0 == b.0) {
+                let class = run[0].0 as usize;
+                let whole = run.len() == classes[class].len();
+                if !(whole && run.iter().all(|entry| entry.1 == run[0].1)) {
+                    equal[class].store(false, Ordering::Relaxed);
+                }
+            }
+        });
+    });
     let mut kept: Vec<Vec<usize>> = classes
         .into_iter()
         .zip(equal)
-        .filter(|(_, equal)| *equal)
+        .filter(|(_, equal)| equal.load(Ordering::Relaxed))
         .map(|(class, _)| class)
         .collect();
     kept.sort_unstable_by_key(|class| class[0]);

@@ -1,7 +1,7 @@
 //! One visit of all rows, in parallel, with the same bits for any number of threads.
 //!
-//! Rows are cut into at most [`GROUPS_MAX`] groups of nearly equal numbers of rows. The cut
-//! depends on the matrix and the number of weightings alone. Each group sums its columns in row
+//! Slices of rows are cut into at most [`GROUPS_MAX`] groups. The cut
+//! depends on the matrix and the number of weightings alone. Each group sums its columns in stored
 //! order; the groups are added in order.
 //!
 //! Memory: per row 36 bytes, per column and group 28 + 8·d bytes for d weightings. The number of
@@ -14,6 +14,7 @@ use rayon::prelude::*;
 
 use super::spread::Histogram;
 use crate::base::random::mix;
+use crate::operator::row_visit::Entry;
 use crate::operator::{RowWeights, StoredRows};
 
 const GROUPS_MAX: usize = 8;
@@ -58,24 +59,25 @@ fn weightings(weights: &RowWeights) -> usize {
 }
 
 pub(super) fn visit(matrix: &StoredRows, weights: &RowWeights) -> Visit {
-    let groups = row_groups(matrix, weightings(weights));
+    let groups = slice_groups(matrix, weightings(weights));
     let parts: Vec<Visit> =
-        groups.into_par_iter().map(|rows| visit_group(matrix, weights, rows)).collect();
+        groups.into_par_iter().map(|slices| visit_group(matrix, weights, slices)).collect();
     let mut parts = parts.into_iter();
     let mut all = parts.next().expect("at least one group");
     parts.for_each(|part| all.append(part));
+    all.rows.put_in_file_order(matrix);
     all
 }
 
-fn row_groups(matrix: &StoredRows, weightings: usize) -> Vec<Range<usize>> {
-    let (rows, entries) = (matrix.rows(), matrix.entries());
+fn slice_groups(matrix: &StoredRows, weightings: usize) -> Vec<Range<usize>> {
+    let (slices, entries) = (matrix.cut().slices(), matrix.entries());
     let column_bytes = matrix.columns().max(1) * (28 + 8 * weightings);
     let groups = (12 * entries / column_bytes).clamp(1, GROUPS_MAX);
-    let cut = |group: usize| rows * group / groups;
+    let cut = |group: usize| slices * group / groups;
     (0..groups).map(|group| cut(group)..cut(group + 1)).collect()
 }
 
-fn visit_group(matrix: &StoredRows, weights: &RowWeights, rows: Range<usize>) -> Visit {
+fn visit_group(matrix: &StoredRows, weights: &RowWeights, slices: Range<usize>) -> Visit {
     let n = matrix.columns();
     let d = weightings(weights);
     let mut part = Visit {
@@ -92,20 +94,32 @@ fn visit_group(matrix: &StoredRows, weights: &RowWeights, rows: Range<usize>) ->
         nonfinite: 0,
     };
     let mut squared_weights = vec![0.0; d];
-    for i in rows {
+    matrix.each_row(slices, |i, entries| {
         for (set, squared) in squared_weights.iter_mut().enumerate() {
             *squared = weights.at(i, set).powi(2);
         }
-        part.add_row(matrix, i, &squared_weights);
-    }
+        part.add_row(i, entries, &squared_weights);
+    });
     part
 }
 
+impl RowSums {
+    /// From the order of the visit to that of the file.
+    fn put_in_file_order(&mut self, matrix: &StoredRows) {
+        self.count = matrix.in_file_order(&self.count);
+        for list in [&mut self.sum, &mut self.absolute, &mut self.square] {
+            *list = matrix.in_file_order(list);
+        }
+        self.hash = matrix.in_file_order(&self.hash);
+    }
+}
+
 impl Visit {
-    fn add_row(&mut self, matrix: &StoredRows, i: usize, squared_weights: &[f64]) {
+    fn add_row(&mut self, i: usize, entries: &[Entry], squared_weights: &[f64]) {
         let (mut count, mut sum, mut absolute, mut square, mut hash) = (0, 0.0, 0.0, 0.0, 0u64);
         let row_key = mix(i as u64);
-        for (j, a) in matrix.row(i).entries() {
+        for &(j, a) in entries {
+            let j = j as usize;
             if a == 0.0 {
                 self.explicit_zeros += 1;
                 continue;
