@@ -184,7 +184,7 @@ fn a_lane_knows_nothing_of_the_others() {
     let shapes = [Shape::EmptyRows, Shape::OneDenseRow, Shape::Wide, Shape::Tall, Shape::Large];
     for (number, shape) in shapes.into_iter().enumerate() {
         for (turn, storage) in STORAGES.into_iter().enumerate() {
-            if cfg!(miri) && turn != number % 3 {
+            if cfg!(miri) && (turn != number || shape == Shape::Large) {
                 continue;
             }
             let stream = Stream::new(5, turn as u64);
@@ -229,18 +229,21 @@ pub fn on_threads<T: Send>(threads: usize, work: impl FnOnce() -> T + Send) -> T
 
 #[test]
 fn any_number_of_threads_gives_the_same_bits() {
-    let pools: &[usize] = if cfg!(miri) { &[1, 3] } else { &[1, 2, 3, 7] };
+    let pools: &[usize] = if cfg!(miri) { &[3] } else { &[2, 3, 7] };
     for groups in [1, 3] {
         for (turn, storage) in STORAGES.into_iter().enumerate() {
+            if cfg!(miri) && turn != groups % 3 {
+                continue;
+            }
             let stream = Stream::new(6, turn as u64);
             let case = Case::new(Shape::Large, storage, groups, &stream);
-            for &lanes in LANES {
+            for &lanes in if cfg!(miri) { &[3] } else { LANES } {
                 let blocks = Blocks::new(&case.cut, lanes, Zeros::Scalars, &stream);
                 with_tiles!(case, storage, tiles => {
                     on_threads(3, || compare(&case, tiles, &blocks, "three threads"));
-                    for twin in twins() {
+                    for (twin, way) in twins().flat_map(|twin| WAYS.map(|way| (twin, way))) {
                         let of = |threads: usize| {
-                            let how = (twin, WAYS[threads % 2]);
+                            let how = (twin, way);
                             let run = || fast(&case, tiles, &blocks, how, &mut room(&case, lanes));
                             on_threads(threads, run).bits()
                         };

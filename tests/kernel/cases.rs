@@ -4,7 +4,7 @@ use std::ops::Range;
 
 use ellbow::base::random::Stream;
 use ellbow::kernel::tiles::{Cut, Parts, Start};
-use ellbow::kernel::{Factors, RowOrder, Tiles};
+use ellbow::kernel::{Factors, RowOrder, Tiles, Value};
 
 /// The widest tile, and a width with which an interpreter ends in time.
 const WIDEST: usize = if cfg!(miri) { 256 } else { 65_536 };
@@ -45,14 +45,14 @@ impl Shape {
             Self::EmptyRows => (70, 20, 0.2),
             Self::OneDenseRow => (40, 60, 0.02),
             Self::Wide => (6, 150, 0.3),
-            Self::Tall if cfg!(miri) => (100, 9, 0.6),
+            Self::Tall if cfg!(miri) => (50, 9, 0.6),
             Self::Tall => (600, 9, 0.6),
             Self::SingleColumn => (90, 1, 0.7),
             Self::MoreThanATile => (11, WIDEST + 1, 3e-4),
             Self::NoRows => (0, 5, 1.0),
             Self::NoColumns => (7, 0, 1.0),
             Self::AllRowsEmpty => (30, 12, 0.0),
-            Self::Large if cfg!(miri) => (60, 40, 0.25),
+            Self::Large if cfg!(miri) => (60, 40, 0.15),
             Self::Large => (700, 300, 0.35),
         }
     }
@@ -64,6 +64,7 @@ impl Shape {
             Self::Tall => (4, 8, 4),
             Self::SingleColumn => (1, 8, 2),
             Self::MoreThanATile => (WIDEST, 2, 2),
+            Self::Large if cfg!(miri) => (16, 4, 3),
             Self::Large => (64, 8, 5),
             _ => (16, 2, 3),
         };
@@ -135,10 +136,7 @@ impl Case {
     }
 
     /// The tiles, laid out as the kernel documents.
-    pub fn tiles<V: Copy + Send + Sync>(&self, keep: impl Fn(f64) -> V) -> Tiles<V>
-    where
-        V: ellbow::kernel::Value,
-    {
+    pub fn tiles<V: Value>(&self, keep: impl Fn(f64) -> V) -> Tiles<V> {
         Tiles::new(self.cut, self.parts(keep)).unwrap()
     }
 
@@ -226,7 +224,7 @@ pub struct Blocks {
 
 impl Blocks {
     pub fn new(cut: &Cut, count: usize, zeros: Zeros, stream: &Stream) -> Self {
-        let stopped = |l: usize| zeros == Zeros::Lanes && l % 2 == 0;
+        let stopped = |l: usize| zeros == Zeros::Lanes && l.is_multiple_of(2);
         let scalar = |from: u64, i: usize, l: usize| {
             let number = stream.normal(from + (i * count + l) as u64);
             let zero = stopped(l) || zeros == Zeros::Scalars && (i + l) % 3 == 1;
