@@ -113,7 +113,7 @@ fn the_record_has_every_field_and_the_folder_every_file() {
             ("/method", "lsqr"),
             ("/penalty", "size"),
             // What so small a system holds stays in the caches.
-            ("/pass", "one"),
+            ("/pass", "two-phase"),
             ("/simd", Twin::current().word()),
             ("/stop/reason", "gradient"),
             ("/settings/command", command),

@@ -17,6 +17,9 @@ const SAMPLES: usize = 16;
 /// v and s of this many bytes stay in a core's own caches beside the matrix.
 const CACHED: usize = 256 << 10;
 
+/// A matrix of this many bytes stays in the cache that cores share.
+const SHARED: u64 = 32 << 20;
+
 /// A line of memory: eight numbers, which are eight unknowns of one lane or one of eight lanes.
 const LINE: usize = 64;
 
@@ -56,7 +59,8 @@ impl Ways {
         let choose = |lanes: usize, lines: fn(&Touched) -> f64| {
             let n = cut.columns;
             if 16 * n * lanes <= CACHED {
-                return Way::OnePass;
+                // Only a matrix that comes from memory every time is worth the smaller units.
+                return if matrix.bytes() > SHARED { Way::OnePass } else { Way::TwoPhase };
             }
             let stored = matrix.bytes() as f64;
             let line = JUMP * LINE as f64;

@@ -13,11 +13,14 @@ pub struct Threads {
     pub warning: Option<String>,
 }
 
+/// Threads that share a processor at most: more would only wait for each other.
+const SHARES_MAX: usize = 4;
+
 /// Variables that grant threads, in order of precedence.
 const VARIABLES: [&str; 3] = ["RAYON_NUM_THREADS", "OMP_NUM_THREADS", "SLURM_CPUS_PER_TASK"];
 
 impl Threads {
-    /// `asked` wins, also beyond what the affinity mask grants (with a warning); else the first of
+    /// `asked` wins, also beyond what the affinity mask grants (with a warning, and up to a limit); else the first of
     /// the environment's variables that holds a positive number, capped by the mask; else the mask.
     pub fn resolve(asked: Option<usize>) -> Self {
         let granted = std::thread::available_parallelism().map_or(1, usize::from);
@@ -30,10 +33,16 @@ impl Threads {
         variable: impl Fn(&str) -> Option<String>,
     ) -> Self {
         if let Some(count) = asked {
+            let used = count.min(SHARES_MAX * granted);
             let warning = (count > granted).then(|| {
-                format!("--threads {count} is more than the {granted} processors this process may use: they will share")
+                let rest = if used < count {
+                    format!("{used} threads share them")
+                } else {
+                    "they will share".into()
+                };
+                format!("--threads {count} is more than the {granted} processors this process may use: {rest}")
             });
-            return Self { count, from: "--threads".into(), warning };
+            return Self { count: used, from: "--threads".into(), warning };
         }
         for name in VARIABLES {
             // OpenMP allows a list, one number per level of nesting: the first counts.
@@ -86,6 +95,7 @@ mod tests {
             (threads.count, threads.from, threads.warning.is_some())
         };
         assert_eq!(of(Some(9), 4), (9, "--threads".into(), true));
+        assert_eq!(of(Some(2_000_000), 4), (16, "--threads".into(), true));
         assert_eq!(of(None, 4), (3, "OMP_NUM_THREADS".into(), false));
         assert_eq!(of(None, 2), (2, "OMP_NUM_THREADS".into(), false));
         let none = Threads::decide(None, 5, |_| None);
