@@ -4,7 +4,7 @@
 //!
 //! u_il ← f_il·(aᵢᵀ v_l) − α_l u_il,   s_l ← s_l + h_il u_il aᵢ,   q_l ← q_l + (g_il u_il)²
 //!
-//! The matrix lies in [`tiles`]. [`pass`] goes through it one of two [`Way`]s, which give the same
+//! The matrix lies in [`tiles`]. [`pass()`] goes through it one of two [`Way`]s, which give the same
 //! bits: every sum goes over fixed pieces in a fixed order, whatever the way, the number of
 //! threads, and the lanes beside.
 //!

@@ -134,9 +134,9 @@ type Loop<'a, V> = unsafe fn(Segments<'a, V>, usize, *const f64, *mut f64);
 
 /// The two inner loops for some lanes.
 pub struct Loops<'a, V> {
-    /// [`segments::dots`].
+    /// The products: `dots` in `segments`.
     pub dots: Loop<'a, V>,
-    /// [`segments::scatter`].
+    /// The sums: `scatter` in `segments`.
     pub scatter: Loop<'a, V>,
 }
 
