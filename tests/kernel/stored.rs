@@ -333,7 +333,7 @@ proptest! {
 #[test]
 fn a_way_is_what_it_was_made() {
     let mut stored = StoredRows::from_dense(2, 2, &[1.0, 0.0, 2.0, 3.0]);
-    assert_eq!(stored.way(1), Way::OnePass, "two numbers stay in any cache");
+    assert_eq!(stored.way(1), Way::TwoPhase, "a small matrix stays in the shared cache");
     for way in WAYS {
         stored.go(way);
         assert_eq!([1, 2, 17].map(|lanes| stored.way(lanes)), [way; 3]);
