@@ -14,7 +14,7 @@ use std::process::ExitCode;
 use std::time::Instant;
 
 use ellbow::base::random::Stream;
-use ellbow::operator::{CompressedRows, Precision, RowWeights, StoredRows, Weighted};
+use ellbow::operator::{Precision, RowWeights, StoredRows, Weighted};
 use ellbow::solve::fan::{Fan, Rotations};
 use ellbow::solve::lsmr::Lsmr;
 use ellbow::solve::lsqr::Lsqr;
@@ -26,13 +26,6 @@ use serde_json::json;
 mod load;
 #[path = "systems/scenarios.rs"]
 mod scenarios;
-
-/// What a scenario makes.
-pub struct Made {
-    pub matrix: CompressedRows,
-    pub truth: Vec<f64>,
-    pub row_sums: Option<Vec<f64>>,
-}
 
 struct Request {
     source: load::Source,

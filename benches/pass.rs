@@ -27,9 +27,7 @@ use std::time::Instant;
 
 use ellbow::base::random::Stream;
 use ellbow::kernel::{Twin, Way};
-use ellbow::operator::{
-    CompressedRows, Frame, Operator, Pass, Precision, RowWeights, StoredRows, Weighted,
-};
+use ellbow::operator::{Frame, Operator, Pass, Precision, RowWeights, StoredRows, Weighted};
 use ellbow::solve::fan::Fan;
 use ellbow::solve::lsqr::Lsqr;
 use ellbow::solve::{Lane, Problem, Recurrence};
@@ -40,13 +38,6 @@ use serde_json::json;
 mod load;
 #[path = "systems/scenarios.rs"]
 mod scenarios;
-
-/// What a scenario makes.
-pub struct Made {
-    pub matrix: CompressedRows,
-    pub truth: Vec<f64>,
-    pub row_sums: Option<Vec<f64>>,
-}
 
 struct Request {
     source: load::Source,

@@ -25,7 +25,6 @@ use std::time::Instant;
 
 use ellbow::base::random::Stream;
 use ellbow::base::sums;
-use ellbow::operator::CompressedRows;
 use ndarray::ArrayView1;
 use ndarray_npy::WriteNpyExt;
 use rayon::prelude::*;
@@ -35,18 +34,12 @@ mod npz;
 #[path = "systems/scenarios.rs"]
 mod scenarios;
 
+use scenarios::Made;
+
 const USAGE: &str = "usage: cargo bench --bench systems -- SCENARIO DIR [--scale F]
   SCENARIO  parallel-512, crosswell-3d or hostile
   DIR       folder to write to
   --scale F share of the full number of entries, above 0 and at most 1 (default 1)";
-
-/// What a scenario makes.
-pub struct Made {
-    pub matrix: CompressedRows,
-    pub truth: Vec<f64>,
-    /// Sum that each row must have, where it is known from elsewhere.
-    pub row_sums: Option<Vec<f64>>,
-}
 
 struct Request {
     scenario: String,

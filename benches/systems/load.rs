@@ -7,7 +7,7 @@ use ellbow::base::Grid;
 use ellbow::files::matrix::{self, ReadOptions};
 use ellbow::operator::{CompressedRows, Precision};
 
-use super::{Made, scenarios};
+use super::scenarios::{self, Made};
 
 pub struct Source {
     system: Option<PathBuf>,

@@ -6,12 +6,20 @@ use ellbow::operator::CompressedRows;
 use ellbow::system::rays::{self, Segment};
 use rayon::prelude::*;
 
-use super::Made;
-
 #[path = "../../tests/support/ellipses.rs"]
 mod ellipses;
 
 pub const SEED: u64 = 1;
+
+/// What a scenario makes.
+// Benches that only measure read the matrix alone.
+#[allow(dead_code)]
+pub struct Made {
+    pub matrix: CompressedRows,
+    pub truth: Vec<f64>,
+    /// Sum that each row must have, where it is known from elsewhere.
+    pub row_sums: Option<Vec<f64>>,
+}
 
 /// Parallel views over half a turn of a square of unit cells; truth: the head phantom.
 /// Entries grow with cells a side × views × rays, so each is scaled by ∛F.

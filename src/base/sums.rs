@@ -21,6 +21,23 @@ pub fn tree(parts: &[f64]) -> f64 {
     }
 }
 
+/// Number `l` of every `width` numbers, added pairwise in order.
+pub fn total(sums: &[f64], width: usize, l: usize) -> f64 {
+    strided_tree(sums, width, l, 0, sums.len() / width)
+}
+
+fn strided_tree(sums: &[f64], width: usize, l: usize, from: usize, count: usize) -> f64 {
+    match count {
+        0 => 0.0,
+        1 => sums[from * width + l],
+        _ => {
+            let half = count.next_power_of_two() / 2;
+            strided_tree(sums, width, l, from, half)
+                + strided_tree(sums, width, l, from + half, count - half)
+        }
+    }
+}
+
 fn piece_sum(values: &[f64], other: &[f64]) -> f64 {
     let mut sums = [0.0f64; 8];
     let (heads, tail) = values.as_chunks::<8>();

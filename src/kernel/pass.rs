@@ -16,7 +16,7 @@ use super::schedule::{Schedule, Unit};
 use super::tiles::{Cut, Tiles};
 use super::twins::{Twin, loops, widths};
 use super::value::Value;
-use crate::base::sums::{PARALLEL_MIN, PIECE};
+use crate::base::sums::{self, PARALLEL_MIN, PIECE};
 
 /// How a pass goes through the matrix. The bits are the same.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
@@ -180,7 +180,7 @@ pub fn pass<V: Value>(
         add_groups(&room.partial[..partial], s);
     }
     for (l, square) in squares.iter_mut().enumerate() {
-        *square = sum_pairwise(&room.squares[..slice_squares], k, l, 0, cut.slices());
+        *square = sums::total(&room.squares[..slice_squares], k, l);
     }
 }
 
@@ -233,19 +233,6 @@ fn add_groups(partial: &[f64], s: &mut [f64]) {
         s.chunks_mut(PIECE).enumerate().for_each(add);
     } else {
         s.par_chunks_mut(PIECE).enumerate().for_each(add);
-    }
-}
-
-/// Sum of lane `l` over `count` slices, added pairwise.
-pub(crate) fn sum_pairwise(squares: &[f64], k: usize, l: usize, from: usize, count: usize) -> f64 {
-    match count {
-        0 => 0.0,
-        1 => squares[from * k + l],
-        _ => {
-            let half = count.next_power_of_two() / 2;
-            sum_pairwise(squares, k, l, from, half)
-                + sum_pairwise(squares, k, l, from + half, count - half)
-        }
     }
 }
 

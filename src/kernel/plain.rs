@@ -4,11 +4,12 @@
 
 use std::ops::Range;
 
-use super::pass::{Factors, sum_pairwise};
+use super::pass::Factors;
 use super::row_order::RowOrder;
 use super::segments::PARTS;
 use super::tiles::Tiles;
 use super::value::Value;
+use crate::base::sums;
 
 /// Blocks as in [`super::Lanes`].
 pub struct Blocks<'a> {
@@ -59,7 +60,7 @@ pub fn pass<V: Value>(
                 s[j * k + l] = if number == 0 { sum } else { s[j * k + l] + sum };
             }
         }
-        squares[l] = sum_pairwise(&slice_squares, 1, 0, 0, cut.slices());
+        squares[l] = sums::total(&slice_squares, 1, 0);
     }
 }
 

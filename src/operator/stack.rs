@@ -4,16 +4,14 @@
 
 use rayon::prelude::*;
 
-use crate::base::sums::{PARALLEL_MIN, PIECE};
-use crate::kernel::pass::sum_pairwise;
+use crate::base::sums::{self, PARALLEL_MIN, PIECE};
 use crate::operator::{Frame, Operator, Pass, Scratch, Weighted};
 
 /// Penalty rows of a piece of work.
 const ROWS: usize = PIECE / 4;
 
-/// [W A; λ P] D over a borrowed W A D: u has m + n rows,
-/// the last n in inner order. A pass costs one of W A D and 40 bytes an
-/// unknown and lane.
+/// [W A; λ P] D over a borrowed W A D: u has m + n rows, the last n in inner order. A pass costs one
+/// of W A D and 40 bytes an unknown and lane.
 pub struct Stacked<'a> {
     top: &'a Weighted<'a>,
     /// p in inner order, one factor per unknown; `None` means 1.
@@ -86,7 +84,7 @@ impl Operator for Stacked<'_> {
             blocks.for_each(|(place, ((u, s), sums))| piece(place, u, s, sums));
         }
         for (l, square) in squares.iter_mut().enumerate() {
-            *square += sum_pairwise(&scratch.penalty_squares, k, l, 0, pieces);
+            *square += sums::total(sums, k, l);
         }
     }
 

@@ -13,6 +13,7 @@
 //! Sources: Hestenes & Stiefel, J. Res. NBS 49:409, 1952; Björck, Elfving & Strakoš, SIMAX
 //! 19:720, 1998 (attainable accuracy).
 
+use crate::base::sums;
 use crate::kernel::Block;
 use crate::operator::{Frame, Operator, Pass, Scratch};
 use crate::solve::cgls_lane::LaneState;
@@ -142,8 +143,8 @@ impl<'a> Cgls<'a> {
             if !self.due[place] {
                 continue;
             }
-            let gamma = pieces::total(&self.sums, 2 * k, 2 * place);
-            let model_squared = pieces::total(&self.sums, 2 * k, 2 * place + 1);
+            let gamma = sums::total(&self.sums, 2 * k, 2 * place);
+            let model_squared = sums::total(&self.sums, 2 * k, 2 * place + 1);
             let squared = self.squares[place];
             let finite = gamma.is_finite() && squared.is_finite();
             let fault =
@@ -185,8 +186,8 @@ impl<'a> Cgls<'a> {
         });
         for place in 0..k {
             let lane = &mut self.lanes[self.live[place]];
-            lane.slope = pieces::total(&self.sums, 2 * k, 2 * place);
-            lane.direction_squared = pieces::total(&self.sums, 2 * k, 2 * place + 1);
+            lane.slope = sums::total(&self.sums, 2 * k, 2 * place);
+            lane.direction_squared = sums::total(&self.sums, 2 * k, 2 * place + 1);
         }
     }
 
@@ -223,12 +224,12 @@ impl<'a> Cgls<'a> {
             }
         });
         for place in 0..k {
-            let gamma = pieces::total(&self.sums, 2 * k, 2 * place);
+            let gamma = sums::total(&self.sums, 2 * k, 2 * place);
             let finite = gamma.is_finite() && self.squares[place].is_finite();
             let fault =
                 if finite { None } else { Some(pieces::locate(&self.u, &self.t, k, place)) };
             let lane = &mut self.lanes[self.live[place]];
-            lane.model_squared = pieces::total(&self.sums, 2 * k, 2 * place + 1);
+            lane.model_squared = sums::total(&self.sums, 2 * k, 2 * place + 1);
             lane.fault = lane.fault.or(fault);
             lane.trusted = false;
             lane.since_refresh += 1;

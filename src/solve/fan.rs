@@ -5,6 +5,7 @@
 //! Shifts share one Krylov space: Frommer & Maass, SISC 20:1831, 1999; van den Eshof & Sleijpen,
 //! ANM 49:17, 2004.
 
+use crate::base::sums;
 use crate::solve::golub_kahan::GolubKahan;
 use crate::solve::pieces::{self, PIECE_ROWS, TrackVectors, lane_of};
 use crate::solve::problem::Problem;
@@ -189,7 +190,7 @@ impl<'a, R: Rotations> Fan<'a, R> {
         });
         for (place, track) in self.tracks.iter_mut().enumerate() {
             if self.updates[place].is_some() {
-                track.rotations.set_model_norm_squared(pieces::total(&self.sums, tracks, place));
+                track.rotations.set_model_norm_squared(sums::total(&self.sums, tracks, place));
             }
         }
     }

@@ -6,6 +6,7 @@
 //! traversal; then β = ‖û‖ and v ← (s/β − β v)/α. The same algebra as two products, to rounding.
 //! Source: Golub & Kahan, SIAM J. Numer. Anal. 2:205, 1965.
 
+use crate::base::sums;
 use crate::kernel::Block;
 use crate::operator::{Frame, Operator, Pass, Scratch};
 use crate::solve::pieces;
@@ -181,7 +182,7 @@ impl<'a> GolubKahan<'a> {
             }
         });
         for place in 0..k {
-            let alpha = pieces::total(&self.sums, k, place).sqrt();
+            let alpha = sums::total(&self.sums, k, place).sqrt();
             self.accept(place, alpha);
         }
         let scale = &self.scale;

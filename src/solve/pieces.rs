@@ -80,22 +80,6 @@ pub fn for_each_two(
     }
 }
 
-/// Adds the pieces' sums pairwise, in order: number `l` of every `width`.
-pub fn total(sums: &[f64], width: usize, l: usize) -> f64 {
-    tree(sums, width, l, 0, sums.len() / width)
-}
-
-fn tree(sums: &[f64], k: usize, l: usize, from: usize, count: usize) -> f64 {
-    match count {
-        0 => 0.0,
-        1 => sums[from * k + l],
-        _ => {
-            let half = count.next_power_of_two() / 2;
-            tree(sums, k, l, from, half) + tree(sums, k, l, from + half, count - half)
-        }
-    }
-}
-
 /// Vectors of the tracks, laid out piece by piece: all vectors of all tracks for 1024 unknowns
 /// lie together, so that one sweep updates every track while a piece of v is in L1.
 pub struct TrackVectors {
